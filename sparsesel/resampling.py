@@ -198,9 +198,14 @@ def _codes(labels: ArrayLike, name: str, n_rows: int | None) -> NDArray[np.intp]
 
 def _has_missing(values: NDArray[Any]) -> bool:
     if values.dtype.kind == "O":
-        # A missing value, NaN or pandas' NA, is the one that does not equal itself.
-        return any(value is None or (value == value) is not True for value in values)
-    return bool(values.dtype.kind in "fc" and np.isnan(values).any())
+        return any(map(_is_missing, values))
+    return bool(values.dtype.kind in "fcmM" and np.isnan(values).any())
+
+
+def _is_missing(label: Any) -> bool:
+    # NaN differs from itself; pandas' NA compares to itself with neither yes nor no.
+    same = label == label
+    return label is None or not isinstance(same, bool | np.bool_) or not same
 
 
 def _class_sets(

@@ -25,6 +25,7 @@ import enum
 import functools
 import hashlib
 import importlib.metadata
+import io
 import numbers
 import os
 import pickle
@@ -33,10 +34,12 @@ import sys
 import tempfile
 import threading
 import time
+import uuid
 import warnings
-from collections.abc import Callable, Iterable, Iterator, Mapping
+from collections.abc import Callable, Generator, Iterable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
+from types import BuiltinFunctionType, FunctionType
 from typing import Any
 
 import joblib
@@ -139,8 +142,9 @@ def run_tasks(
             progress.resume()
         else:
             missing.append(index)
-    with one_blas_thread():
-        for index, result in _run(function, [(index, items[index]) for index in missing], settings):
+    tasks = [(index, items[index]) for index in missing]
+    with one_blas_thread(), _closed(_run(function, tasks, settings)) as finished:
+        for index, result in finished:
             results[index] = result
             if store:
                 store.write(index, result)
@@ -148,9 +152,23 @@ def run_tasks(
     return results
 
 
+@contextmanager
+def _closed(
+    finished: Generator[tuple[int, Any], None, None],
+) -> Iterator[Generator[tuple[int, Any], None, None]]:
+    """Call off what is left when a run is interrupted, before BLAS threads come back."""
+    try:
+        yield finished
+    finally:
+        with warnings.catch_warnings():
+            # joblib's advice on tasks called off is for those who meant to stop early.
+            warnings.simplefilter("ignore", UserWarning)
+            finished.close()
+
+
 def _run(
     function: Callable[..., Any], tasks: list[tuple[int, Any]], settings: TaskSettings
-) -> Iterator[tuple[int, Any]]:
+) -> Generator[tuple[int, Any], None, None]:
     """Yield (index, result) as results come, in any order."""
     if len(tasks) < 2 or joblib.effective_n_jobs(settings.n_jobs) == 1:
         for index, item in tasks:
@@ -159,17 +177,70 @@ def _run(
     shared = function if isinstance(function, functools.partial) else functools.partial(function)
     call = delayed(_run_one)
     calls = (
-        call(shared.func, index, item, *shared.args, **shared.keywords) for index, item in tasks
+        call(shared.func, index, item, _PROCESS, *shared.args, **shared.keywords)
+        for index, item in tasks
     )
-    yield from _parallel(settings)(calls)
+    for process, index, result in _parallel(settings)(calls):
+        yield index, result if process == _PROCESS else _aligned(result)
 
 
 def _run_one(
-    function: Callable[..., Any], index: int, item: Any, /, *args: Any, **keywords: Any
-) -> tuple[int, Any]:
+    function: Callable[..., Any], index: int, item: Any, home: str, /, *args: Any, **keywords: Any
+) -> tuple[str, int, Any]:
     """Run one task in a worker, which may be a process with a BLAS bound of its own."""
+    if home != _PROCESS:
+        function, item, args, keywords = _aligned((function, item, args, keywords))
     with one_blas_thread():
-        return index, function(*args, item, **keywords)
+        return _PROCESS, index, function(*args, item, **keywords)
+
+
+# Tells processes apart, on different machines too.
+_PROCESS = uuid.uuid4().hex
+
+
+class _Taker(pickle.Pickler):
+    """Takes an object apart; arrays, and what is found by name, are set aside whole."""
+
+    def __init__(self, frame: io.BytesIO) -> None:
+        super().__init__(frame, protocol=pickle.HIGHEST_PROTOCOL)
+        self.aside: list[Any] = []
+
+    def persistent_id(self, part: Any) -> int | None:
+        if not isinstance(part, np.ndarray | type | FunctionType | BuiltinFunctionType):
+            return None
+        self.aside.append(part)
+        return len(self.aside) - 1
+
+
+class _Rebuilder(pickle.Unpickler):
+    """Puts an object together again around the parts that were set aside."""
+
+    def __init__(self, frame: io.BytesIO, aside: list[Any]) -> None:
+        super().__init__(frame)
+        self._aside = aside
+
+    def persistent_load(self, position: int) -> Any:
+        return self._aside[position]
+
+
+def _aligned(shipped: Any) -> Any:
+    """Return what came from another process with every array at an aligned address.
+
+    Some backends unpack arrays wherever they lie in the message. At an odd address the same
+    product takes another way through NumPy and BLAS, and so has other bits, and a compiled kernel
+    needs another specialisation.
+    """
+    frame = io.BytesIO()
+    taker = _Taker(frame)
+    taker.dump(shipped)
+    odd = [isinstance(part, np.ndarray) and not part.flags.aligned for part in taker.aside]
+    if not any(odd):
+        return shipped
+    aside = [
+        np.array(part, order="K") if is_odd else part
+        for part, is_odd in zip(taker.aside, odd, strict=True)
+    ]
+    return _Rebuilder(io.BytesIO(frame.getvalue()), aside).load()
 
 
 def _parallel(settings: TaskSettings) -> Parallel:
@@ -187,34 +258,60 @@ def _parallel(settings: TaskSettings) -> Parallel:
 # ---------------------------------------------------------------------------------------------
 
 
-class _BlasBound:
-    """Holds BLAS at one thread while anybody is inside."""
+class _SharedBound:
+    """Holds the BLAS libraries that count threads per process at one, while anybody is inside."""
 
     def __init__(self) -> None:
         self._lock = threading.Lock()
         self._inside = 0
-        self._limiter: Any = None
+        self._before: list[int] = []
 
-    def enter(self) -> None:
+    def enter(self, libraries: Sequence[Any]) -> None:
         with self._lock:
             if self._inside == 0:
-                self._limiter = _controller().limit(limits=1, user_api="blas")
+                self._before = _set_threads(libraries, [1] * len(libraries))
             self._inside += 1
 
-    def leave(self) -> None:
+    def leave(self, libraries: Sequence[Any]) -> None:
         with self._lock:
             self._inside -= 1
             if self._inside == 0:
-                self._limiter.restore_original_limits()
+                _set_threads(libraries, self._before)
+                _release(libraries)
 
 
-_BLAS_BOUND = _BlasBound()
+_SHARED_BOUND = _SharedBound()
 
 
 @functools.cache
-def _controller() -> ThreadpoolController:
-    # Finding the loaded libraries takes milliseconds, bounding them microseconds.
-    return ThreadpoolController()
+def _blas_libraries() -> tuple[list[Any], list[Any]]:
+    """Return the loaded BLAS libraries that count threads per process, and those per thread."""
+    # Finding them takes milliseconds, bounding them microseconds: hence the cache.
+    libraries = ThreadpoolController().select(user_api="blas").lib_controllers
+    per_thread = [
+        library
+        for library in libraries
+        if library.internal_api == "mkl"
+        or (library.internal_api == "openblas" and library.threading_layer == "openmp")
+    ]
+    return [library for library in libraries if library not in per_thread], per_thread
+
+
+def _set_threads(libraries: Sequence[Any], counts: Sequence[int]) -> list[int]:
+    """Set the number of threads of each library and return the numbers before."""
+    before = [library.num_threads for library in libraries]
+    _release(libraries)
+    for library, count in zip(libraries, counts, strict=True):
+        library.set_num_threads(count)
+    return before
+
+
+def _release(libraries: Sequence[Any]) -> None:
+    # threadpoolctl lets the first thread that ever set a number go on doing so and ignores all
+    # others. Here the one that enters first need not be the one that leaves last.
+    for library in libraries:
+        if hasattr(library, "clear_controlling_thread"):
+            library.clear_controlling_thread(force=True)
 
 
 @contextmanager
@@ -229,11 +326,14 @@ def one_blas_thread() -> Iterator[None]:
     ...     float(np.ones(3) @ np.ones(3))
     3.0
     """
-    _BLAS_BOUND.enter()
+    per_process, per_thread = _blas_libraries()
+    _SHARED_BOUND.enter(per_process)
+    before = _set_threads(per_thread, [1] * len(per_thread))
     try:
         yield
     finally:
-        _BLAS_BOUND.leave()
+        _set_threads(per_thread, before)
+        _SHARED_BOUND.leave(per_process)
 
 
 # ---------------------------------------------------------------------------------------------
@@ -471,7 +571,7 @@ def _(part: Mapping) -> bytes:
 
 @_digest.register
 def _(part: sp.sparray | sp.spmatrix) -> bytes:
-    stored: Any = part if getattr(part, "format", None) in ("csr", "csc") else sp.csr_array(part)
+    stored = part if part.format in ("csr", "csc") else part.tocsr()
     arrays = (stored.indptr, stored.indices, stored.data)
     return _combine(stored.format, repr(stored.shape).encode(), *map(_digest, arrays))
 
@@ -519,7 +619,7 @@ class _Store:
             stored = self._path(index).read_bytes()
             if hashlib.sha256(stored[32:]).digest() == stored[:32]:
                 return True, pickle.loads(stored[32:])
-        except (OSError, pickle.UnpicklingError, EOFError, AttributeError, ImportError):
+        except Exception:  # unpickling what another version wrote can raise anything
             pass
         return False, None
 
@@ -559,30 +659,32 @@ def _open_store(settings: TaskSettings) -> _Store | None:
             f"The fingerprint {settings.fingerprint!r} can't name a directory. Allowed are "
             "letters, digits, '-' and '_'. Use the value of sparsesel.tasks.fingerprint."
         )
-    memory = settings.memory
+    location = _location(settings.memory)
+    if location is None:
+        return None
+    directory = location / "sparsesel" / settings.fingerprint
+    try:
+        directory.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise ValueError(
+            f"memory={settings.memory!r} can't keep results: {error}. Allowed is a directory, or a "
+            "path where one can be made. Choose one that you can write to, or memory=None."
+        ) from error
+    return _Store(directory)
+
+
+def _location(memory: Any) -> Path | None:
     if isinstance(memory, str | os.PathLike):
-        memory = _open_memory(memory)
-    if not isinstance(memory, joblib.Memory):
+        memory = os.fspath(memory)
+    elif isinstance(memory, joblib.Memory):
+        memory = memory.location
+    else:
         raise ValueError(
             f"memory={memory!r} can't keep results. Allowed are None, the path of a directory and "
             "a joblib.Memory. Pass the path of a directory that you can write to."
         )
-    if memory.store_backend is None:
-        return None
-    # Inside joblib's own folder, so that memory.clear() clears these too.
-    directory = Path(memory.store_backend.location) / "sparsesel" / settings.fingerprint
-    directory.mkdir(parents=True, exist_ok=True)
-    return _Store(directory)
-
-
-def _open_memory(path: str | os.PathLike[str]) -> joblib.Memory:
-    try:
-        return joblib.Memory(os.fspath(path), verbose=0)
-    except OSError as error:
-        raise ValueError(
-            f"memory={os.fspath(path)!r} can't keep results: {error}. Allowed is a directory, or "
-            "a path where one can be made. Choose one that you can write to, or memory=None."
-        ) from error
+    # joblib keeps its results in a folder of this name: beside them, memory.clear() clears ours.
+    return None if memory is None else Path(memory) / "joblib"
 
 
 # ---------------------------------------------------------------------------------------------
