@@ -3,10 +3,13 @@
 from __future__ import annotations
 
 import ast
+import importlib
+import inspect
 import sys
 from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
+from types import FunctionType
 
 import pytest
 
@@ -212,6 +215,26 @@ def test_what_a_kernel_calls_lives_in_its_file(path):
             if isinstance(node, ast.Call) and isinstance(node.func, ast.Name)
         }
         assert not called & set(ours), f"{function.name} calls {called & set(ours)}"
+
+
+# --- docstrings -------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("path", [p for p in FILES if place_of(p) != "__main__"], ids=relative)
+def test_public_objects_are_documented(path):
+    parts = path.relative_to(ROOT).with_suffix("").parts
+    module = importlib.import_module(".".join(parts).removesuffix(".__init__"))
+    for name in getattr(module, "__all__", []):
+        public = getattr(module, name)
+        documented = {name: public} if callable(public) else {}
+        if inspect.isclass(public):
+            documented |= {
+                f"{name}.{member}": getattr(public, member)
+                for member, value in vars(public).items()
+                if member[0] != "_" and isinstance(value, FunctionType | property)
+            }
+        bare = [label for label, value in documented.items() if not inspect.getdoc(value)]
+        assert not bare
 
 
 # --- size -----------------------------------------------------------------------------------
