@@ -1,0 +1,23 @@
+"""Models of the features: copies that are exchangeable with the originals."""
+
+from __future__ import annotations
+
+from sparsesel.knockoffs.low_rank import LowRankCovariance
+from sparsesel.knockoffs.s_vectors import (
+    S_VECTOR_METHODS,
+    SVector,
+    SVectorStatus,
+    block_diagonal_s_vector,
+    s_vector,
+    solve_s_vector,
+)
+
+__all__ = [
+    "S_VECTOR_METHODS",
+    "LowRankCovariance",
+    "SVector",
+    "SVectorStatus",
+    "block_diagonal_s_vector",
+    "s_vector",
+    "solve_s_vector",
+]
