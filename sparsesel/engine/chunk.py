@@ -285,7 +285,7 @@ class Walk:
             taken[b, columns[~used[b, : work.size[b]]]] = False
         kernels.compact(
             crowded, used, work.size, work.filled, work.columns, work.slots, work.coef,
-            work.order_one, work.order_two, work.gram, work.border,
+            work.order_one, work.order_two, work.gram, work.border, self.loss.keeps_gram,
         )  # fmt: skip
 
     def _propose(self, problems: IntArray, threshold: FloatArray) -> NDArray[np.bool_]:

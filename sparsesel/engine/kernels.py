@@ -104,7 +104,10 @@ def extend_many(problems, weights, basis, pool, slots, filled, size, gram, borde
 
 
 @kernel
-def compact(problems, keep, size, filled, columns, slots, coef, order_one, order_two, gram, border):
+def compact(
+    problems, keep, size, filled, columns, slots, coef, order_one, order_two, gram, border,
+    keeps_gram,
+):  # fmt: skip
     """Drop the working columns whose ``keep`` is False, moving the rest up."""
     for b in problems:
         kept = 0
@@ -116,7 +119,7 @@ def compact(problems, keep, size, filled, columns, slots, coef, order_one, order
             coef[b, kept] = coef[b, k]
             order_one[b, kept] = order_one[b, k]
             order_two[b, kept] = order_two[b, k]
-            if gram.shape[0] > 1:
+            if keeps_gram:
                 for c in range(border.shape[2]):
                     border[b, kept, c] = border[b, k, c]
                 target = 0

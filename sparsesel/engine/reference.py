@@ -115,10 +115,12 @@ def _standard_deviations(X: Any, weight: np.ndarray) -> np.ndarray:
         return np.sqrt(weight @ (X - mean) ** 2)
     entries = sp.coo_array(X)
     row, column = entries.row, entries.col
-    # The entries that are not stored are zeros, each at distance |mean| from the mean.
-    stored = np.bincount(column, weight[row], X.shape[1])
+    # The entries that are not stored are zeros, each at distance |mean| from the mean. Where all
+    # are stored, one minus the sum of the weights would be a rounding error, not zero.
+    absent = np.maximum(1.0 - np.bincount(column, weight[row], X.shape[1]), 0.0)
+    absent[np.bincount(column, minlength=X.shape[1]) == X.shape[0]] = 0.0
     near = np.bincount(column, weight[row] * (entries.data - mean[column]) ** 2, X.shape[1])
-    return np.sqrt(near + np.maximum(1.0 - stored, 0.0) * mean**2)
+    return np.sqrt(near + absent * mean**2)
 
 
 def _terms(
