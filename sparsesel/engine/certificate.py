@@ -144,24 +144,25 @@ def certify_log(
 
 
 @exact_kernel
-def candidates(gradient, order_one, threshold, taken, limit, found):
+def candidates(gradient, order_one, threshold, taken, limit):
     """Columns not taken with |g| over threshold * l1, the ``limit`` largest by ratio.
 
-    Writes their positions to ``found`` in column order and returns how many there are.
+    Returned in column order.
     """
-    ratios = np.empty(found.size)
     count = 0
     for j in range(gradient.size):
-        weight = order_one[j]
-        if weight == np.inf or taken[j]:
-            continue
-        if not abs(gradient[j]) <= threshold * weight:
-            if count == ratios.size:
-                ratios = np.concatenate((ratios, np.empty(count)))
-                found = np.concatenate((found, np.empty(count, np.int64)))
-            ratios[count] = abs(gradient[j]) / weight
-            found[count] = j
-            count += 1
+        if not abs(gradient[j]) <= threshold * order_one[j]:
+            count += not taken[j]
+    found = np.empty(count, np.int64)
+    ratios = np.empty(count)
+    count = 0
+    for j in range(gradient.size):
+        if not abs(gradient[j]) <= threshold * order_one[j] and not taken[j]:
+            # An infinite penalty times a threshold of zero is no bound; the column is out.
+            if order_one[j] != np.inf:
+                found[count] = j
+                ratios[count] = abs(gradient[j]) / order_one[j]
+                count += 1
     if count <= limit:
         return found[:count]
     cut = np.partition(ratios[:count], count - limit)[count - limit]

@@ -8,8 +8,8 @@ product per round, and the pool of gathered columns.
 A round at penalty a_k:
 
 1. columns that pass the sequential strong rule |g_j| >= rho v_j s_j (2 a_k - a_{k-1}) at
-   the last gradient join the working set, the largest first and at most as many as the
-   support holds (Tibshirani et al. 2012, section 7; a heuristic, so exact checks follow);
+   the last gradient join the working set, the largest first and at most a share of the
+   support (Tibshirani et al. 2012, section 7; a heuristic, so exact checks follow);
 2. the working sets are solved;
 3. the residuals of all open problems are multiplied with the table;
 4. problems whose gap passes are done; in the others the columns that violate their bound
@@ -37,8 +37,9 @@ if TYPE_CHECKING:
 
 IntArray = NDArray[np.int64]
 
-# Columns proposed to a working set at once: as many as its support holds, at least this.
-_FEWEST_PROPOSED = 12
+# Columns proposed to a working set at once: this part of its support, at least so many.
+_PROPOSED_SHARE = 4
+_FEWEST_PROPOSED = 10
 # A working set is swept of unused columns when they outnumber the used ones by this factor
 # and constant; sweeping moves Gram matrices, so not at every penalty.
 _SLACK_FACTOR, _SLACK = 2, 40
@@ -294,7 +295,8 @@ class Walk:
         grown = np.zeros(problems.size, np.bool_)
         found = []
         for b in problems:
-            limit = max(_FEWEST_PROPOSED, int(np.count_nonzero(work.coef[b, : work.size[b]])))
+            used = int(np.count_nonzero(work.coef[b, : work.size[b]]))
+            limit = max(_FEWEST_PROPOSED, used // _PROPOSED_SHARE)
             found.append(
                 certificate.candidates(
                     chunk.gradient[b],
@@ -302,7 +304,6 @@ class Walk:
                     threshold[b] * chunk.l1_ratio,
                     chunk.taken[b],
                     limit,
-                    np.empty(4 * limit, np.int64),
                 )
             )
         if not any(part.size for part in found):

@@ -43,11 +43,12 @@ class SquaredError:
     def start(self, chunk: Chunk) -> None:
         """Project the response; the residual starts there."""
         target = chunk.response - chunk.offset
-        loads = np.einsum("bkn,bn->bk", chunk.basis.rows, chunk.weights * target)
-        centred = target - np.einsum("bk,bkn->bn", loads, chunk.basis.rows)
+        chunk.load = np.einsum("bkn,bn->bk", chunk.basis.rows, chunk.weights * target)
+        centred = target - np.einsum("bk,bkn->bn", chunk.load, chunk.basis.rows)
         # Once more, because the first projection leaves rounding of the size of the response.
-        loads = np.einsum("bkn,bn->bk", chunk.basis.rows, chunk.weights * centred)
-        centred -= np.einsum("bk,bkn->bn", loads, chunk.basis.rows)
+        rest = np.einsum("bkn,bn->bk", chunk.basis.rows, chunk.weights * centred)
+        centred -= np.einsum("bk,bkn->bn", rest, chunk.basis.rows)
+        chunk.load += rest
         null = 0.5 * np.einsum("bn,bn->b", chunk.weights, centred**2)
         size = np.einsum("bn,bn->b", chunk.weights, chunk.response**2 + chunk.offset**2)
         chunk.null_objective = np.where(null <= _NOTHING_LEFT * size, 0.0, null)
@@ -84,11 +85,8 @@ class SquaredError:
 
     def basis_load(self, chunk: Chunk, b: int) -> FloatArray:
         """Coordinates of problem b on its basis."""
-        work = chunk.work
-        m = work.size[b]
-        fitted = work.coef[b, :m] @ chunk.pool.rows[work.slots[b, :m]]
-        remainder = chunk.response[b] - chunk.offset - fitted
-        return chunk.basis.rows[b] @ (chunk.weights[b] * remainder)
+        m = chunk.work.size[b]
+        return chunk.load[b] - chunk.work.coef[b, :m] @ chunk.work.border[b, :m]
 
     def row_losses(self, chunk: Chunk, problems: Problems) -> FloatArray:
         """The loss of every row, those of weight zero too: (problems.size, n)."""
