@@ -25,7 +25,7 @@ from numpy.typing import ArrayLike, NDArray
 from scipy import sparse
 from sklearn.exceptions import ConvergenceWarning
 
-from sparsesel.engine.chunk import Walk, alpha_max, open_chunk
+from sparsesel.engine.chunk import Walk, open_chunk
 from sparsesel.engine.design import DesignMatrix, FloatArray
 from sparsesel.engine.losses import LOSSES
 from sparsesel.engine.status import Status
@@ -242,7 +242,7 @@ def geometric_grid(largest: FloatArray, count: int, ratio: float) -> FloatArray:
 def _solve_chunk(design: DesignMatrix, options: _Options, item: _Item) -> BankResult:
     loss = LOSSES[item.problems.loss]
     chunk = open_chunk(design, item.problems, loss, options.max_iter)
-    largest = alpha_max(chunk)
+    largest = chunk.alpha_max
     if isinstance(item.alphas, int):
         alphas = geometric_grid(largest, item.alphas, options.alpha_min_ratio)
     else:

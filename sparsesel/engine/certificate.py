@@ -25,24 +25,30 @@ from sparsesel.engine._jit import exact_kernel
 
 
 @exact_kernel
-def scan(gradient, order_one, order_two, alpha, l1_ratio):
+def _excess(size, gradient, order_one, order_two, alpha, l1_ratio, outside, weight_one, weight_two):
     """Largest |g| / (alpha rho l1), at least 1, and the conjugate at t = 1.
 
-    Columns with an infinite penalty are out of the problem and not looked at.
+    Over the working columns and those outside whose gradient had to be known exactly
+    (``outside``, with their penalties); all others are bounded under their limits.
     """
     excess = 1.0
     conjugate = 0.0
-    for j in range(gradient.size):
-        weight = order_one[j]
-        if weight == np.inf:
-            continue
-        limit = alpha * l1_ratio * weight
-        magnitude = abs(gradient[j])
+    for position in range(size + outside.size):
+        if position < size:
+            magnitude = abs(gradient[position])
+            one = order_one[position]
+            two = order_two[position]
+        else:
+            magnitude = abs(outside[position - size])
+            one = weight_one[position - size]
+            two = weight_two[position - size]
+        limit = alpha * l1_ratio * one
         if not magnitude <= limit:
             # Once a NaN, always a NaN: no comparison with it is true.
-            excess = excess if magnitude / limit <= excess or excess != excess else magnitude / limit
+            if not (magnitude / limit <= excess or excess != excess):
+                excess = magnitude / limit
             over = magnitude - limit
-            conjugate += 0.5 * over * over / (alpha * (1.0 - l1_ratio) * order_two[j])
+            conjugate += 0.5 * over * over / (alpha * (1.0 - l1_ratio) * two)
     return excess, conjugate
 
 
@@ -101,74 +107,37 @@ def _primal_log(weights, signs, predictor):
 
 @exact_kernel
 def certify_squared(
-    problems, alpha, l1_ratio, null, weights, residual, centred, gradient, order_one, order_two,
-    size, work_one, work_two, coef, gap,
+    alpha, l1_ratio, null, weights, residual, centred, size, gradient, order_one, order_two, coef,
+    outside, weight_one, weight_two,
 ):  # fmt: skip
-    """Relative gaps of the named squared-error problems, written to ``gap``.
-
-    ``gradient`` (B, p) holds x_j'Wr of every problem;
-    ``work_one`` and ``work_two`` are the penalties of the working columns.
-    """
-    for b in problems:
-        excess, conjugate = scan(
-            gradient[b], order_one[b], order_two[b], alpha[b], l1_ratio
-        )
-        primal = _primal_squared(weights[b], residual[b]) + _penalty(
-            size[b], coef[b], work_one[b], work_two[b], alpha[b], l1_ratio
-        )
-        found = primal - _dual_squared(weights[b], residual[b], centred[b], 1.0 / excess)
-        if l1_ratio < 1.0:
-            other = primal - _dual_squared(weights[b], residual[b], centred[b], 1.0) + conjugate
-            found = other if other < found else found
-        gap[b] = found / null[b]
+    """Relative gap of one squared-error problem; see ``_excess`` for the columns."""
+    excess, conjugate = _excess(
+        size, gradient, order_one, order_two, alpha, l1_ratio, outside, weight_one, weight_two
+    )
+    primal = _primal_squared(weights, residual) + _penalty(
+        size, coef, order_one, order_two, alpha, l1_ratio
+    )
+    gap = primal - _dual_squared(weights, residual, centred, 1.0 / excess)
+    if l1_ratio < 1.0:
+        other = primal - _dual_squared(weights, residual, centred, 1.0) + conjugate
+        gap = other if other < gap else gap
+    return gap / null
 
 
 @exact_kernel
 def certify_log(
-    problems, alpha, l1_ratio, null, weights, residual, signs, predictor, offset, gradient,
-    order_one, order_two, size, work_one, work_two, coef, gap,
+    alpha, l1_ratio, null, weights, residual, signs, predictor, offset, size, gradient, order_one,
+    order_two, coef, outside, weight_one, weight_two,
 ):  # fmt: skip
-    """Relative gaps of the named log-loss problems; see ``certify_squared``."""
-    for b in problems:
-        excess, conjugate = scan(
-            gradient[b], order_one[b], order_two[b], alpha[b], l1_ratio
-        )
-        primal = _primal_log(weights[b], signs[b], predictor[b]) + _penalty(
-            size[b], coef[b], work_one[b], work_two[b], alpha[b], l1_ratio
-        )
-        found = primal - _dual_log(weights[b], residual[b], offset, 1.0 / excess)
-        if l1_ratio < 1.0:
-            other = primal - _dual_log(weights[b], residual[b], offset, 1.0) + conjugate
-            found = other if other < found else found
-        gap[b] = found / null[b]
-
-
-@exact_kernel
-def candidates(gradient, order_one, threshold, taken, limit):
-    """Columns not taken with |g| over threshold * l1, the ``limit`` largest by ratio.
-
-    Returned in column order.
-    """
-    count = 0
-    for j in range(gradient.size):
-        if not abs(gradient[j]) <= threshold * order_one[j]:
-            count += not taken[j]
-    found = np.empty(count, np.int64)
-    ratios = np.empty(count)
-    count = 0
-    for j in range(gradient.size):
-        if not abs(gradient[j]) <= threshold * order_one[j] and not taken[j]:
-            # An infinite penalty times a threshold of zero is no bound; the column is out.
-            if order_one[j] != np.inf:
-                found[count] = j
-                ratios[count] = abs(gradient[j]) / order_one[j]
-                count += 1
-    if count <= limit:
-        return found[:count]
-    cut = np.partition(ratios[:count], count - limit)[count - limit]
-    kept = 0
-    for k in range(count):
-        if not ratios[k] < cut and kept < limit:
-            found[kept] = found[k]
-            kept += 1
-    return found[:kept]
+    """Relative gap of one log-loss problem; see ``_excess`` for the columns."""
+    excess, conjugate = _excess(
+        size, gradient, order_one, order_two, alpha, l1_ratio, outside, weight_one, weight_two
+    )
+    primal = _primal_log(weights, signs, predictor) + _penalty(
+        size, coef, order_one, order_two, alpha, l1_ratio
+    )
+    gap = primal - _dual_log(weights, residual, offset, 1.0 / excess)
+    if l1_ratio < 1.0:
+        other = primal - _dual_log(weights, residual, offset, 1.0) + conjugate
+        gap = other if other < gap else gap
+    return gap / null

@@ -2,8 +2,8 @@
 
 Every problem keeps a working set of columns, starts each penalty from the answer to the
 one before, and is done when the duality gap over *all* columns is small enough.  What the
-problems of a chunk share is the product of the table with all their residuals, one matrix
-product per round, and the pool of gathered columns.
+problems of a chunk share is the product of the table with their residuals, one matrix
+product for all that need one, and the pool of gathered columns.
 
 A round at penalty a_k:
 
@@ -11,7 +11,9 @@ A round at penalty a_k:
    the last gradient join the working set, the largest first and at most a share of the
    support (Tibshirani et al. 2012, section 7; a heuristic, so exact checks follow);
 2. the working sets are solved;
-3. the residuals of all open problems are multiplied with the table;
+3. kept gradients bound those of all other columns (``screening``); where too many stay
+   undecided the residual is multiplied with the whole table, for all such problems in one
+   product, and kept; the undecided few are multiplied exactly;
 4. problems whose gap passes are done; in the others the columns that violate their bound
    join the working set, and the round repeats.
 
@@ -26,7 +28,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from sparsesel.engine import certificate, kernels
+from sparsesel.engine import kernels, screening
 from sparsesel.engine.basis import Basis, unpenalised_basis
 from sparsesel.engine.design import DesignMatrix, FloatArray
 from sparsesel.engine.status import Status
@@ -43,6 +45,11 @@ _FEWEST_PROPOSED = 10
 # A working set is swept of unused columns when they outnumber the used ones by this factor
 # and constant; sweeping moves Gram matrices, so not at every penalty.
 _SLACK_FACTOR, _SLACK = 2, 40
+# Residuals with known gradients that are kept per problem.
+_KEPT = 3
+# More undecided columns than this constant and this share of the table make the product
+# with the whole table the cheaper way.
+_UNDECIDED, _UNDECIDED_SHARE = 64, 16
 # Rounds without a new column in which rounding may be repaired before the problem is
 # declared stalled.
 _REPAIRS = 4
@@ -87,6 +94,7 @@ class WorkingSets:
     order_two: FloatArray
     gram: FloatArray
     border: FloatArray
+    gradient: FloatArray
 
     @classmethod
     def empty(cls, n_problems: int, n_basis: int, keeps_gram: bool) -> WorkingSets:
@@ -102,6 +110,7 @@ class WorkingSets:
             order_two=np.empty((n_problems, 0)),
             gram=np.empty((grams, 0, 0)),
             border=np.empty((n_problems if keeps_gram else 1, 0, n_basis)),
+            gradient=np.empty((n_problems, 0)),
         )
 
     def reserve(self, capacity: int) -> None:
@@ -110,7 +119,7 @@ class WorkingSets:
         if capacity <= present:
             return
         room = max(32, capacity + capacity // 3)
-        for name in ("columns", "slots", "coef", "order_one", "order_two", "border"):
+        for name in ("columns", "slots", "coef", "order_one", "order_two", "border", "gradient"):
             old = getattr(self, name)
             new = np.zeros((old.shape[0], room, *old.shape[2:]), old.dtype)
             new[:, :present] = old
@@ -118,6 +127,35 @@ class WorkingSets:
         gram = np.empty((self.gram.shape[0], room, room))
         gram[:, :present, :present] = self.gram
         self.gram = gram
+
+
+@dataclass
+class Kept:
+    """The latest residuals (B, K, n) whose gradients (B, K, p) are known, K in a ring."""
+
+    residual: FloatArray
+    gradient: NDArray[np.float32]
+    count: IntArray
+
+    @classmethod
+    def empty(cls, n_problems: int, n_rows: int, n_columns: int) -> Kept:
+        """Nothing known yet."""
+        return cls(
+            np.zeros((n_problems, _KEPT, n_rows)),
+            np.zeros((n_problems, _KEPT, n_columns), np.float32),
+            np.zeros(n_problems, np.int64),
+        )
+
+    def push(self, problems: IntArray, residual: FloatArray, gradient: FloatArray) -> None:
+        """Keep these, the oldest of their problem making room."""
+        place = self.count[problems] % _KEPT
+        self.residual[problems, place] = residual
+        self.gradient[problems, place] = gradient
+        self.count[problems] += 1
+
+    def known(self, b: int) -> int:
+        """How many residuals of problem b are kept."""
+        return min(int(self.count[b]), _KEPT)
 
 
 @dataclass
@@ -138,8 +176,9 @@ class Chunk:
     pool: Pool
     work: WorkingSets
     taken: NDArray[np.bool_]
-    gradient: FloatArray
-    gap: FloatArray
+    norms: FloatArray
+    kept: Kept
+    alpha_max: FloatArray
     sweeps: IntArray
     # Set by the loss at the null model.
     null_objective: FloatArray = field(default_factory=lambda: np.empty(0))
@@ -160,7 +199,9 @@ def open_chunk(
     penalty = _rows(
         1.0 if problems.penalty_weights is None else problems.penalty_weights, n_problems, p
     )
-    deviation = design.moments(weights).scale
+    moments = design.moments(weights)
+    deviation = moments.scale
+    norms = deviation if problems.fit_intercept else np.hypot(moments.mean, deviation)
     order_one, n_left_out = _first_order(design, penalty, deviation, problems.standardize)
     order_two = order_one
     if problems.l1_ratio < 1.0:
@@ -181,12 +222,15 @@ def open_chunk(
         pool=Pool(design, problems.fit_intercept),
         work=WorkingSets.empty(n_problems, basis.rows.shape[1], loss.keeps_gram),
         taken=np.zeros((n_problems, p), np.bool_),
-        gradient=np.empty((n_problems, p)),
-        gap=np.zeros(n_problems),
+        norms=norms,
+        kept=Kept.empty(n_problems, n, p),
+        alpha_max=np.zeros(n_problems),
         sweeps=np.zeros(n_problems, np.int64),
     )
     loss.start(chunk)
-    chunk.gradient[:] = design.correlate(chunk.weights * chunk.residual)
+    gradient = design.correlate(chunk.weights * chunk.residual)
+    chunk.alpha_max = _alpha_max(gradient, chunk.order_one, chunk.l1_ratio)
+    chunk.kept.push(np.arange(n_problems), chunk.residual, gradient)
     return chunk
 
 
@@ -207,12 +251,12 @@ def _first_order(
     return order_one, np.count_nonzero(constant & ~out, axis=1)
 
 
-def alpha_max(chunk: Chunk) -> FloatArray:
+def _alpha_max(gradient: FloatArray, order_one: FloatArray, l1_ratio: float) -> FloatArray:
     """The smallest penalty at which every penalised coefficient is zero (B,)."""
     with np.errstate(invalid="ignore"):
-        ratios = np.abs(chunk.gradient) / chunk.order_one
-    ratios[np.isinf(chunk.order_one)] = 0.0
-    return ratios.max(axis=1, initial=0.0) / chunk.l1_ratio
+        ratios = np.abs(gradient) / order_one
+    ratios[np.isinf(order_one)] = 0.0
+    return ratios.max(axis=1, initial=0.0) / l1_ratio
 
 
 class Walk:
@@ -234,7 +278,8 @@ class Walk:
         # With a null objective of zero every penalised coefficient is zero, provably.
         self._trivial = chunk.null_objective == 0.0
         self._finished = np.zeros(shape[0], np.bool_)
-        self._last = np.maximum(alpha_max(chunk), alphas[:, 0])
+        self._last = np.maximum(chunk.alpha_max, alphas[:, 0])
+        self._found = np.empty(_UNDECIDED + chunk.design.n_columns // _UNDECIDED_SHARE, np.int64)
 
     def run(self) -> None:
         """Visit every grid point until all problems are finished."""
@@ -249,7 +294,7 @@ class Walk:
     def _visit(self, k: int, problems: IntArray) -> None:
         chunk, alpha = self.chunk, np.ascontiguousarray(self.alphas[:, k])
         chunk.sweeps[:] = 0
-        chunk.gap[problems] = 0.0
+        self.gap[problems, k] = 0.0
         self.status[problems, k] = Status.CONVERGED
         pending = problems[~self._trivial[problems]]
         self._drop_unused(pending)
@@ -258,12 +303,9 @@ class Walk:
         repairs = np.zeros(alpha.size, np.int64)
         while pending.size:
             self.loss.solve(chunk, pending, alpha, inside * self.tol * chunk.null_objective)
-            chunk.gradient[pending] = chunk.design.correlate(
-                chunk.weights[pending] * chunk.residual[pending]
-            )
-            self.loss.certify(chunk, pending, alpha)
-            open_ = pending[~(chunk.gap[pending] <= self.tol)]
-            grown = self._propose(open_, alpha)
+            violators = self._certify(k, pending, alpha)
+            open_ = pending[~(self.gap[pending, k] <= self.tol)]
+            grown = self._admit(open_, [violators[b] for b in open_])
             repairs[open_] += ~grown
             inside[open_[~grown]] *= 0.1
             spent = chunk.sweeps[open_] >= chunk.max_iter
@@ -271,8 +313,49 @@ class Walk:
             stalled = ~spent & (repairs[open_] > _REPAIRS)
             self.status[open_[stalled], k] = Status.STALLED
             pending = open_[~spent & ~stalled]
-        self.gap[problems, k] = chunk.gap[problems]
         self.n_iter[problems, k] = chunk.sweeps[problems]
+
+    def _certify(self, k: int, problems: IntArray, alpha: FloatArray) -> dict[int, IntArray]:
+        """Write the gaps of the named problems; return the columns that violate their bounds."""
+        chunk = self.chunk
+        outside = {b: self._undecided(b, alpha[b]) for b in problems}
+        crowded = np.array([b for b in problems if outside[b] is None], dtype=np.int64)
+        if crowded.size:
+            residual = chunk.residual[crowded]
+            gradient = chunk.design.correlate(chunk.weights[crowded] * residual)
+            chunk.kept.push(crowded, residual, gradient)
+        violators = {}
+        for b in problems:
+            columns = outside[b]
+            if columns is None:
+                columns = self._undecided(b, alpha[b])
+            if columns is None:
+                columns = np.flatnonzero(~chunk.taken[b] & np.isfinite(chunk.order_one[b]))
+            gradient = chunk.design.correlate_columns(
+                chunk.weights[b] * chunk.residual[b], columns
+            )
+            one, two = chunk.order_one[b, columns], chunk.order_two[b, columns]
+            gap = self.loss.certify(chunk, b, alpha[b], (gradient, one, two))
+            self.gap[b, k] = gap
+            if not gap <= self.tol:
+                violators[int(b)] = screening.violating(
+                    columns, gradient, chunk.order_one[b], alpha[b] * chunk.l1_ratio,
+                    self._most_proposed(b),
+                )  # fmt: skip
+        return violators
+
+    def _undecided(self, b: int, alpha: float) -> IntArray | None:
+        """Columns that kept gradients can't bound at this residual; None if too many."""
+        chunk, kept = self.chunk, self.chunk.kept
+        known = kept.known(b)
+        mixing, rest = screening.mix(
+            chunk.weights[b], chunk.residual[b], kept.residual[b], known
+        )
+        total = screening.undecided(
+            kept.gradient[b], known, mixing, rest, chunk.norms[b], chunk.order_one[b],
+            chunk.taken[b], alpha * chunk.l1_ratio, self._found,
+        )  # fmt: skip
+        return None if total < 0 else self._found[:total].copy()
 
     def _drop_unused(self, problems: IntArray) -> None:
         work, taken = self.chunk.work, self.chunk.taken
@@ -289,44 +372,47 @@ class Walk:
             work.order_one, work.order_two, work.gram, work.border, self.loss.keeps_gram,
         )  # fmt: skip
 
-    def _propose(self, problems: IntArray, threshold: FloatArray) -> NDArray[np.bool_]:
-        """Add columns whose |g| exceeds threshold * rho * v * s; says which sets grew."""
-        chunk, work = self.chunk, self.chunk.work
-        grown = np.zeros(problems.size, np.bool_)
+    def _most_proposed(self, b: int) -> int:
+        work = self.chunk.work
+        used = int(np.count_nonzero(work.coef[b, : work.size[b]]))
+        return max(_FEWEST_PROPOSED, used // _PROPOSED_SHARE)
+
+    def _propose(self, problems: IntArray, threshold: FloatArray) -> None:
+        """Admit columns whose predicted |g| exceeds threshold * rho * v * s."""
+        chunk, kept = self.chunk, self.chunk.kept
         found = []
         for b in problems:
-            used = int(np.count_nonzero(work.coef[b, : work.size[b]]))
-            limit = max(_FEWEST_PROPOSED, used // _PROPOSED_SHARE)
-            found.append(
-                certificate.candidates(
-                    chunk.gradient[b],
-                    chunk.order_one[b],
-                    threshold[b] * chunk.l1_ratio,
-                    chunk.taken[b],
-                    limit,
-                )
+            known = kept.known(b)
+            mixing, _ = screening.mix(
+                chunk.weights[b], chunk.residual[b], kept.residual[b], known
             )
-        if not any(part.size for part in found):
+            found.append(
+                screening.promising(
+                    kept.gradient[b], known, mixing, chunk.order_one[b], chunk.taken[b],
+                    threshold[b] * chunk.l1_ratio, self._most_proposed(b),
+                )  # fmt: skip
+            )
+        self._admit(problems, found)
+
+    def _admit(self, problems: IntArray, found: list[IntArray]) -> NDArray[np.bool_]:
+        """Put the found columns into the working sets; says which sets grew."""
+        chunk, work = self.chunk, self.chunk.work
+        grown = np.array([part.size > 0 for part in found], dtype=np.bool_)
+        if not grown.any():
             return grown
         chunk.pool.ensure(np.concatenate(found))
         work.reserve(max(work.size[b] + f.size for b, f in zip(problems, found, strict=True)))
-        for position, (b, columns) in enumerate(zip(problems, found, strict=True)):
-            if columns.size:
-                grown[position] = True
-                self._admit(b, columns)
+        for b, columns in zip(problems, found, strict=True):
+            place = slice(work.size[b], work.size[b] + columns.size)
+            work.columns[b, place] = columns
+            work.slots[b, place] = chunk.pool.slot_of[columns]
+            work.coef[b, place] = 0.0
+            work.order_one[b, place] = chunk.order_one[b, columns]
+            work.order_two[b, place] = chunk.order_two[b, columns]
+            work.size[b] += columns.size
+            chunk.taken[b, columns] = True
         self.loss.extend(chunk, problems[grown])
         return grown
-
-    def _admit(self, b: int, columns: IntArray) -> None:
-        chunk, work = self.chunk, self.chunk.work
-        place = slice(work.size[b], work.size[b] + columns.size)
-        work.columns[b, place] = columns
-        work.slots[b, place] = chunk.pool.slot_of[columns]
-        work.coef[b, place] = 0.0
-        work.order_one[b, place] = chunk.order_one[b, columns]
-        work.order_two[b, place] = chunk.order_two[b, columns]
-        work.size[b] += columns.size
-        chunk.taken[b, columns] = True
 
     def _record(self, k: int, problems: IntArray) -> None:
         if self.held_out is not None:

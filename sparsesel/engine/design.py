@@ -26,6 +26,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
 
+from sparsesel.engine import screening
+
 FloatArray = NDArray[np.float64]
 
 # Bytes of one block of columns in double: small enough to stay in a second-level cache's
@@ -75,6 +77,10 @@ class DesignMatrix:
             out[:, block] = rows @ self._dense(block)
         return out
 
+    def correlate_columns(self, row: FloatArray, columns: NDArray[np.int64]) -> FloatArray:
+        """``row`` (n,) times the named columns of X: (m,)."""
+        return row @ self._dense(columns)
+
     @cached_property
     def _extremes(self) -> tuple[FloatArray, FloatArray]:
         centres = np.empty(self.n_columns)
@@ -117,6 +123,13 @@ class DesignMatrix:
         return np.ascontiguousarray((values - self.centres[columns] if centred else values).T)
 
 
+def read_only(array: NDArray) -> NDArray:
+    """A view that kernels take: read-only, so that one specialisation serves every table."""
+    view = np.asarray(array).view()
+    view.flags.writeable = False
+    return view
+
+
 def _variance_about_own_mean(weights: FloatArray, values: FloatArray) -> FloatArray:
     shift = weights @ values
     return np.stack(
@@ -135,6 +148,13 @@ class DenseDesign(DesignMatrix):
             return rows @ self.table
         return super().correlate(rows)
 
+    def correlate_columns(self, row: FloatArray, columns: NDArray[np.int64]) -> FloatArray:
+        if not self.table.flags.f_contiguous:
+            return super().correlate_columns(row, columns)
+        out = np.empty(columns.size)
+        screening.dense_dots(read_only(self.table.T), row, columns, out)
+        return out
+
 
 class SparseDesign(DesignMatrix):
     """A table in compressed sparse columns."""
@@ -144,6 +164,15 @@ class SparseDesign(DesignMatrix):
 
     def correlate(self, rows: FloatArray) -> FloatArray:
         return np.ascontiguousarray((self.table.T @ np.ascontiguousarray(rows.T)).T)
+
+    def correlate_columns(self, row: FloatArray, columns: NDArray[np.int64]) -> FloatArray:
+        out = np.empty(columns.size)
+        table = self.table
+        screening.sparse_dots(
+            read_only(table.data), read_only(table.indices), read_only(table.indptr), row, columns,
+            out,
+        )  # fmt: skip
+        return out
 
 
 def as_design(X: Any) -> DesignMatrix:

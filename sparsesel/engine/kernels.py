@@ -315,23 +315,24 @@ def _penalties(size, alpha, l1_ratio, order_one, order_two, l1, l2):
 @kernel
 def solve_squared(
     problems, alpha, l1_ratio, target, budget, weights, centred, basis, pool, slots, size,
-    order_one, order_two, gram, border, coef, residual, sweeps,
+    order_one, order_two, gram, border, coef, gradients, residual, sweeps,
 ):  # fmt: skip
     """Squared error on the working sets of the named problems.
 
     ``centred`` (B, n) is the response less offset, projected; ``residual`` (B, n) is
     formed from it afresh after every descent, so the rounding of one descent never
     reaches the next.  A descent is repeated on the exact gradient until the gap of the
-    working set is at most the target or the budget of sweeps is spent.
+    working set is at most the target or the budget of sweeps is spent; ``gradients``
+    holds the exact gradient of the working columns at the end.
     """
     capacity = coef.shape[1]
-    gradient = np.empty(capacity)
     l1 = np.empty(capacity)
     l2 = np.empty(capacity)
     for b in problems:
         m = size[b]
         w = weights[b]
         r = residual[b]
+        gradient = gradients[b]
         _penalties(m, alpha[b], l1_ratio, order_one[b], order_two[b], l1, l2)
         last = np.inf
         while True:
@@ -546,7 +547,7 @@ def _log_step(weights, signs, basis, pool, slots, size, l1, l2, old, coef, load,
 @kernel
 def solve_log(
     problems, alpha, l1_ratio, target, budget, weights, signs, offset, basis, pool, slots, size,
-    order_one, order_two, gram, coef, load, predictor, residual, sweeps,
+    order_one, order_two, gram, coef, gradients, load, predictor, residual, sweeps,
 ):  # fmt: skip
     """Log loss on the working sets of the named problems: Newton around ``descend``.
 
@@ -570,6 +571,7 @@ def solve_log(
         m = size[b]
         w = weights[b]
         psi = residual[b]
+        gradient = gradients[b]
         _penalties(m, alpha[b], l1_ratio, order_one[b], order_two[b], l1, l2)
         predictor[b, :] = offset
         for q in range(n_basis):

@@ -28,6 +28,8 @@ _NOTHING_LEFT = 1e-24
 _SEPARATED = 1e-8
 
 Problems = NDArray[np.int64]
+#: Exact gradients outside the working set with their first- and second-order penalties.
+Outside = tuple[FloatArray, FloatArray, FloatArray]
 
 
 class SquaredError:
@@ -70,17 +72,17 @@ class SquaredError:
         kernels.solve_squared(
             problems, alpha, chunk.l1_ratio, target, chunk.max_iter, chunk.weights,
             chunk.centred, chunk.basis.rows, chunk.pool.rows, work.slots, work.size,
-            work.order_one, work.order_two, work.gram, work.border, work.coef,
+            work.order_one, work.order_two, work.gram, work.border, work.coef, work.gradient,
             chunk.residual, chunk.sweeps,
         )  # fmt: skip
 
-    def certify(self, chunk: Chunk, problems: Problems, alpha: FloatArray) -> None:
-        """Write the relative gaps of the named problems."""
+    def certify(self, chunk: Chunk, b: int, alpha: float, outside: Outside) -> float:
+        """Relative gap of problem b."""
         work = chunk.work
-        certificate.certify_squared(
-            problems, alpha, chunk.l1_ratio, chunk.null_objective, chunk.weights,
-            chunk.residual, chunk.centred, chunk.gradient, chunk.order_one,
-            chunk.order_two, work.size, work.order_one, work.order_two, work.coef, chunk.gap,
+        return certificate.certify_squared(
+            alpha, chunk.l1_ratio, chunk.null_objective[b], chunk.weights[b], chunk.residual[b],
+            chunk.centred[b], work.size[b], work.gradient[b], work.order_one[b],
+            work.order_two[b], work.coef[b], *outside,
         )  # fmt: skip
 
     def basis_load(self, chunk: Chunk, b: int) -> FloatArray:
@@ -169,18 +171,17 @@ class LogLoss:
         kernels.solve_log(
             problems, alpha, chunk.l1_ratio, target, chunk.max_iter, chunk.weights, chunk.signs,
             chunk.offset, chunk.basis.rows, chunk.pool.rows, work.slots, work.size,
-            work.order_one, work.order_two, work.gram, work.coef, chunk.load,
+            work.order_one, work.order_two, work.gram, work.coef, work.gradient, chunk.load,
             chunk.predictor, chunk.residual, chunk.sweeps,
         )  # fmt: skip
 
-    def certify(self, chunk: Chunk, problems: Problems, alpha: FloatArray) -> None:
-        """Write the relative gaps of the named problems."""
+    def certify(self, chunk: Chunk, b: int, alpha: float, outside: Outside) -> float:
+        """Relative gap of problem b."""
         work = chunk.work
-        certificate.certify_log(
-            problems, alpha, chunk.l1_ratio, chunk.null_objective, chunk.weights,
-            chunk.residual, chunk.signs, chunk.predictor, chunk.offset, chunk.gradient,
-            chunk.order_one, chunk.order_two, work.size, work.order_one, work.order_two,
-            work.coef, chunk.gap,
+        return certificate.certify_log(
+            alpha, chunk.l1_ratio, chunk.null_objective[b], chunk.weights[b], chunk.residual[b],
+            chunk.signs[b], chunk.predictor[b], chunk.offset, work.size[b], work.gradient[b],
+            work.order_one[b], work.order_two[b], work.coef[b], *outside,
         )  # fmt: skip
 
     def basis_load(self, chunk: Chunk, b: int) -> FloatArray:
