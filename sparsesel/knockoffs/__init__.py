@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from sparsesel.knockoffs._model import PairedTable
+from sparsesel.knockoffs.fixed_x import FittedFixedX, FixedXModel
+from sparsesel.knockoffs.gaussian import FittedGaussian, GaussianModel
 from sparsesel.knockoffs.low_rank import LowRankCovariance
 from sparsesel.knockoffs.s_vectors import (
     S_VECTOR_METHODS,
@@ -14,7 +17,12 @@ from sparsesel.knockoffs.s_vectors import (
 
 __all__ = [
     "S_VECTOR_METHODS",
+    "FittedFixedX",
+    "FittedGaussian",
+    "FixedXModel",
+    "GaussianModel",
     "LowRankCovariance",
+    "PairedTable",
     "SVector",
     "SVectorStatus",
     "block_diagonal_s_vector",

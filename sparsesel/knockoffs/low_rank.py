@@ -78,6 +78,11 @@ class LowRankCovariance:
         return len(self.diagonal)
 
     @property
+    def shape(self) -> tuple[int, int]:
+        """Shape of the matrix."""
+        return (self.n_features, self.n_features)
+
+    @property
     def variances(self) -> np.ndarray:
         """Diagonal of the whole matrix, shape (n_features,)."""
         return self.diagonal + np.einsum("ij,ij->i", self.loadings, self.loadings)

@@ -80,6 +80,7 @@ class SVectorStatus(Enum):
         "the certified gap is above tol; the s-vector is valid and may be short of the optimum: "
         "raise max_iter, or accept the gap reported"
     )
+    IN_BLOCKS = "solved block by block; the s-vector is valid and no gap is certified"
 
 
 @dataclass(frozen=True)
@@ -262,7 +263,8 @@ def block_diagonal_s_vector(
     for members in _blocks(correlation, largest_block):
         s[members] = s_vector(correlation[np.ix_(members, members)], method)
     varying = variances > 0
-    inner, _ = _well_conditioned(correlation[np.ix_(varying, varying)])
+    inner, _ = well_conditioned(correlation[np.ix_(varying, varying)])
+    assert isinstance(inner, np.ndarray)
     s[varying] *= _largest_scaling(inner, s[varying])
     return s * variances
 
@@ -324,8 +326,34 @@ def _checked(covariance: np.ndarray) -> np.ndarray:
     return 0.5 * (matrix + matrix.T)
 
 
-def _well_conditioned(correlation: np.ndarray) -> tuple[np.ndarray, float]:
-    """The matrix, mixed with the identity no further than its smallest eigenvalue needs."""
+def well_conditioned(
+    correlation: np.ndarray | LowRankCovariance,
+) -> tuple[np.ndarray | LowRankCovariance, float]:
+    """A correlation matrix mixed with the identity no further than its smallest eigenvalue needs.
+
+    Parameters
+    ----------
+    correlation : ndarray of shape (n_features, n_features) or LowRankCovariance
+        Correlation matrix.
+
+    Returns
+    -------
+    mixed : ndarray or LowRankCovariance
+        (1 - weight) * correlation + weight * identity; the matrix itself where the weight is 0.
+    weight : float
+        0 wherever the smallest eigenvalue is at least 1e-8.
+
+    Raises
+    ------
+    ValueError
+        If the matrix has an eigenvalue below -0.01: it is no correlation matrix.
+    """
+    if isinstance(correlation, LowRankCovariance):
+        if correlation.diagonal.min() >= SMALLEST_EIGENVALUE:
+            return correlation, 0.0
+        weight = SMALLEST_EIGENVALUE
+        diagonal = (1.0 - weight) * correlation.diagonal + weight
+        return LowRankCovariance(diagonal, np.sqrt(1.0 - weight) * correlation.loadings), weight
     shifted = add_diagonal(correlation.copy(), -SMALLEST_EIGENVALUE)
     if cholesky(shifted, overwrite=True) is not None:
         return correlation, 0.0
@@ -336,8 +364,8 @@ def _well_conditioned(correlation: np.ndarray) -> tuple[np.ndarray, float]:
             "positive semidefinite up to rounding. Estimate it from complete rows, or shrink it "
             "(sklearn.covariance.LedoitWolf)."
         )
-    shrinkage = (2.0 * SMALLEST_EIGENVALUE - smallest) / (1.0 - smallest)
-    return add_diagonal((1.0 - shrinkage) * correlation, shrinkage), shrinkage
+    weight = (2.0 * SMALLEST_EIGENVALUE - smallest) / (1.0 - smallest)
+    return add_diagonal((1.0 - weight) * correlation, weight), weight
 
 
 def _is_definite(correlation: np.ndarray, s: np.ndarray) -> bool:
@@ -346,8 +374,9 @@ def _is_definite(correlation: np.ndarray, s: np.ndarray) -> bool:
     return cholesky(add_diagonal(2.0 * correlation, -s - rounding), overwrite=True) is not None
 
 
-def _solve_dense(correlation: np.ndarray, method: str, tol: float, max_iter: int) -> SVector:
-    correlation, shrinkage = _well_conditioned(correlation)
+def _solve_dense(given: np.ndarray, method: str, tol: float, max_iter: int) -> SVector:
+    correlation, shrinkage = well_conditioned(given)
+    assert isinstance(correlation, np.ndarray)
     if method == "equicorrelated":
         smallest = float(eigvalsh(correlation, subset_by_index=[0, 0])[0])
         result = SolverResult(np.full(len(correlation), min(1.0, 2.0 * smallest)), 0.0, 1)
@@ -365,16 +394,12 @@ def _solve_dense(correlation: np.ndarray, method: str, tol: float, max_iter: int
 def _solve_low_rank(
     correlation: LowRankCovariance, method: str, tol: float, max_iter: int
 ) -> SVector:
-    smallest = correlation.smallest_eigenvalue()
-    shrinkage = 0.0
-    if smallest < SMALLEST_EIGENVALUE:
-        shrinkage = SMALLEST_EIGENVALUE
-        correlation = LowRankCovariance(
-            (1.0 - shrinkage) * correlation.diagonal + shrinkage,
-            np.sqrt(1.0 - shrinkage) * correlation.loadings,
-        )
+    mixed, shrinkage = well_conditioned(correlation)
+    assert isinstance(mixed, LowRankCovariance)
+    correlation = mixed
     if method == "equicorrelated":
-        result = SolverResult(np.full(correlation.n_features, min(1.0, 2.0 * smallest)), 0.0, 1)
+        level = min(1.0, 2.0 * correlation.smallest_eigenvalue())
+        result = SolverResult(np.full(correlation.n_features, level), 0.0, 1)
     else:
         result = solve_low_rank(correlation, method, tol=tol, max_iter=max_iter)
     loadings = np.sqrt(2.0) * correlation.loadings

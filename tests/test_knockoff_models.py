@@ -1,0 +1,484 @@
+"""Models of the features: second moments, exchangeability, covariates, degenerate columns."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from sklearn.covariance import OAS, LedoitWolf
+from statsmodels.stats._knockoff import _design_knockoff_equi
+
+from sparsesel.knockoffs import FixedXModel, GaussianModel, LowRankCovariance, s_vector
+from sparsesel.knockoffs._gaussian_draws import DenseDraws, LowRankDraws, safe_root
+from sparsesel.knockoffs._model import repeated_columns
+from sparsesel.knockoffs.covariances import ESTIMATORS, number_of_factors
+from sparsesel.tasks import spawn
+
+METHODS = ("mvr", "max_entropy", "sdp", "equicorrelated")
+
+
+def autoregressive(size, correlation):
+    return correlation ** np.abs(np.subtract.outer(np.arange(size), np.arange(size)))
+
+
+def table(generator, n_rows, n_features, correlation=0.6):
+    root = np.linalg.cholesky(autoregressive(n_features, correlation))
+    return generator.standard_normal((n_rows, n_features)) @ root.T
+
+
+def joint_moments(covariance, s):
+    """The covariance of (features, copies): equation 3.1 of Candes, Fan, Janson and Lv 2018."""
+    moved = covariance - np.diag(s)
+    return np.block([[covariance, moved], [moved, covariance]])
+
+
+class Unit:
+    """A generator whose normal draws are the columns of one identity matrix, taken in turn.
+
+    Fed to a sampler with as many rows as it draws numbers per row, copies of zero rows are then the
+    transposed root of their covariance, and no Monte Carlo is needed.
+    """
+
+    def __init__(self, size):
+        self.size, self.used = size, 0
+
+    def standard_normal(self, shape):
+        block = np.eye(self.size)[:, self.used : self.used + shape[1]]
+        self.used += shape[1]
+        assert shape[0] == self.size
+        return block
+
+
+def conditional_moments(draws, n_features, n_noise):
+    """Slope and covariance of copies given features, read off a sampler exactly."""
+    noise = draws.draw(np.zeros((n_noise, n_features)), Unit(n_noise))
+
+    class Silent:
+        def standard_normal(self, shape):
+            return np.zeros(shape)
+
+    slope = draws.draw(np.eye(n_features), Silent())
+    return slope, noise.T @ noise
+
+
+# --- Gaussian draws ---------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("method", METHODS)
+def test_dense_draws_have_the_joint_moments(method):
+    covariance = autoregressive(12, 0.8)
+    s = s_vector(covariance, method)
+    slope, spread = conditional_moments(DenseDraws.prepare(covariance, s), 12, 12)
+    np.testing.assert_allclose(covariance @ slope, covariance - np.diag(s), atol=1e-11)
+    np.testing.assert_allclose(slope.T @ covariance @ slope + spread, covariance, atol=1e-10)
+
+
+@pytest.mark.parametrize("method", METHODS)
+@pytest.mark.parametrize("uniqueness", [1.5, 0.02])
+def test_low_rank_draws_have_the_joint_moments(method, uniqueness):
+    """Small diagonals leave s above twice the diagonal for some features: the coupled draw."""
+    generator = spawn(21, 1)[0]
+    loadings = generator.standard_normal((15, 3))
+    loadings[:3] *= 0.3
+    diagonal = uniqueness * generator.uniform(0.5, 1.5, 15)
+    covariance = LowRankCovariance(diagonal, loadings)
+    covariance = covariance.scaled(1.0 / np.sqrt(covariance.variances))
+    dense = covariance.dense()
+    s = s_vector(dense, method)
+    draws = LowRankDraws.prepare(covariance, s)
+    slope, spread = conditional_moments(draws, 15, 18)
+    np.testing.assert_allclose(dense @ slope, dense - np.diag(s), atol=1e-10)
+    np.testing.assert_allclose(slope.T @ dense @ slope + spread, dense, atol=1e-8)
+
+
+def test_low_rank_draws_beyond_twice_the_diagonal():
+    """One feature apart from a strong factor: its s exceeds twice its diagonal part."""
+    loadings = np.array([[0.1], [0.9], [0.9], [0.9], [0.9], [0.9]])
+    diagonal = np.array([0.05, 0.4, 0.4, 0.4, 0.4, 0.4])
+    covariance = LowRankCovariance(diagonal, np.column_stack([loadings, np.eye(6)[:, 0]]))
+    dense = covariance.dense()
+    s = s_vector(dense, "sdp")
+    draws = LowRankDraws.prepare(covariance, s)
+    assert len(draws.coupled) == 1
+    slope, spread = conditional_moments(draws, 6, 8)
+    np.testing.assert_allclose(dense @ slope, dense - np.diag(s), atol=1e-11)
+    np.testing.assert_allclose(slope.T @ dense @ slope + spread, dense, atol=1e-9)
+
+
+def test_safe_root_of_singular_matrices():
+    generator = spawn(22, 1)[0]
+    half = generator.standard_normal((6, 3))
+    half[4] = 0.0
+    singular = half @ half.T
+    root = safe_root(singular)
+    np.testing.assert_allclose(root @ root.T, singular, atol=1e-10)
+    with pytest.raises(np.linalg.LinAlgError):
+        safe_root(np.array([[1.0, 3.0], [3.0, 1.0]]))
+
+
+def test_sampled_moments_agree_within_their_error():
+    """Exchangeability of a real draw: 4.5 standard errors for each of 100 distinct moments.
+
+    For Gaussian rows the variance of a sample covariance is (S_ij^2 + S_ii S_jj) / n; the chance
+    that one of 210 exceeds 4.5 standard errors is below .002.
+    """
+    covariance, n_rows = autoregressive(10, 0.7), 20_000
+    generator = spawn(23, 1)[0]
+    X = table(generator, n_rows, 10, 0.7)
+    fitted = GaussianModel(covariance, mean=np.zeros(10)).fit(X)
+    both = np.hstack([X, fitted.sample(X, generator)])
+    expected = joint_moments(covariance, fitted.s)
+    found = both.T @ both / n_rows
+    size = np.outer(np.diag(expected), np.diag(expected))
+    error = np.sqrt((expected**2 + size) / n_rows)
+    assert (np.abs(found - expected) < 4.5 * error).all()
+
+
+# --- Gaussian model ---------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("estimate", sorted(ESTIMATORS))
+def test_estimated_copies_have_the_moments_of_the_estimate(estimate):
+    """Given the fit, cov(copy, feature) = cov - diag(s scale^2) in the units of the features."""
+    generator = spawn(24, 1)[0]
+    scale = np.array([1.0, 10.0, 0.1, 3.0, 1.0, 5.0])
+    X = 7.0 + table(generator, 300, 6) * scale
+    fitted = GaussianModel(estimate).fit(X)
+    assert fitted.has_copy.all() and (fitted.s > 0).all()
+    n_rows = 40_000
+    fresh = 7.0 + table(generator, n_rows, 6) * scale
+    copies = fitted.sample(fresh, generator)
+    # a copy's conditional mean is linear with slopes that only the estimate decides
+    together = np.corrcoef(fresh, copies, rowvar=False)[:6, 6:]
+    np.testing.assert_allclose(
+        np.diag(together), 1.0 - fitted.s, atol=0.12, err_msg="1 - s is the correlation"
+    )
+    np.testing.assert_allclose(copies.mean(0), X.mean(0), atol=0.15 * scale.max())
+
+
+def test_ledoit_wolf_and_oas_are_those_of_scikit_learn():
+    generator = spawn(25, 1)[0]
+    rows = table(generator, 60, 8)
+    rows = (rows - rows.mean(0)) / rows.std(0)
+    for name, estimator in (("ledoit_wolf", LedoitWolf), ("oas", OAS)):
+        expected = estimator(assume_centered=True).fit(rows).covariance_
+        np.testing.assert_allclose(ESTIMATORS[name](rows), expected, atol=1e-12)
+        wide = generator.standard_normal((20, 50))
+        wide = (wide - wide.mean(0)) / wide.std(0)
+        expected = estimator(assume_centered=True).fit(wide).covariance_
+        found = ESTIMATORS[name](wide)
+        assert isinstance(found, LowRankCovariance)
+        np.testing.assert_allclose(found.dense(), expected, atol=1e-12)
+
+
+def test_number_of_factors_is_found():
+    generator = spawn(26, 1)[0]
+    loadings = generator.standard_normal((40, 3))
+    rows = generator.standard_normal((300, 3)) @ loadings.T + generator.standard_normal((300, 40))
+    rows = (rows - rows.mean(0)) / rows.std(0)
+    assert number_of_factors(rows) == 3
+    noise = generator.standard_normal((300, 40))
+    assert number_of_factors((noise - noise.mean(0)) / noise.std(0)) == 0
+
+
+@pytest.mark.parametrize("estimate", ["ledoit_wolf", "oas", "factor"])
+def test_more_features_than_rows(estimate):
+    """The low-rank form gives the copies that the dense form would give."""
+    generator = spawn(27, 1)[0]
+    X = table(generator, 40, 120)
+    fitted = GaussianModel(estimate).fit(X)
+    assert isinstance(fitted._draws, LowRankDraws)
+    correlation = fitted._draws.covariance.dense()
+    dense = DenseDraws.prepare(correlation, fitted.solution.s)
+    noise = 120 + fitted._draws.factor.shape[1]
+    slope, spread = conditional_moments(fitted._draws, 120, noise)
+    other_slope, other_spread = conditional_moments(dense, 120, 120)
+    np.testing.assert_allclose(slope, other_slope, atol=1e-10)
+    np.testing.assert_allclose(spread, other_spread, atol=1e-9)
+    assert np.isfinite(fitted.sample(X, generator)).all()
+
+
+def test_covariates_are_conditioned_on():
+    """The copies' dependence on a covariate is that of the features; the rest moves by s."""
+    generator = spawn(28, 1)[0]
+    n_rows = 5_000
+    Z = generator.standard_normal((n_rows, 2))
+    slopes = np.array([[3.0, 0.0, -2.0, 1.0], [0.0, 1.0, 1.0, 0.0]])
+    X = 5.0 + Z @ slopes + table(generator, n_rows, 4)
+    fitted = GaussianModel().fit(X, covariates=Z)
+    copies = fitted.sample(X, generator, covariates=Z)
+    design = np.column_stack([np.ones(n_rows), Z])
+    found, expected = (np.linalg.lstsq(design, M, rcond=None)[0] for M in (copies, X))
+    # the difference of the fits is noise of standard deviation sqrt(2 s / n) at most
+    np.testing.assert_allclose(found, expected, atol=4.5 * np.sqrt(2.0 / n_rows))
+    rest = np.corrcoef(X - design @ expected, copies - design @ expected, rowvar=False)
+    np.testing.assert_allclose(np.diag(rest[:4, 4:]), 1.0 - fitted.s, atol=5.0 / np.sqrt(n_rows))
+
+
+def test_given_joint_covariance_is_conditioned():
+    """A joint covariance of features and covariates gives the regression it implies."""
+    generator = spawn(29, 1)[0]
+    joint = autoregressive(5, 0.7) * np.outer([1, 2, 3, 4, 5], [1, 2, 3, 4, 5])
+    rows = generator.standard_normal((50, 5)) @ np.linalg.cholesky(joint).T
+    X, Z = rows[:, :3], rows[:, 3:]
+    mean = np.arange(5.0)
+    fitted = GaussianModel(joint, mean=mean).fit(X, covariates=Z)
+    slopes = np.linalg.solve(joint[3:, 3:], joint[3:, :3])
+    left = joint[:3, :3] - joint[:3, 3:] @ slopes
+    deviation = np.sqrt(np.diag(left))
+    expected = s_vector(left / np.outer(deviation, deviation), "mvr")
+    np.testing.assert_allclose(fitted.s, expected, rtol=1e-6)
+    centre = fitted._conditioning.centre(X, Z)
+    np.testing.assert_allclose(centre, mean[:3] + (Z - mean[3:]) @ slopes, atol=1e-10)
+    # the same joint covariance as diagonal plus rank one
+    loadings = np.array([[1.0], [0.5], [0.8], [0.6], [0.9]])
+    low = LowRankCovariance(np.array([0.5, 1.0, 0.7, 0.4, 0.9]), loadings)
+    one = GaussianModel(low, mean=mean).fit(X, covariates=Z)
+    two = GaussianModel(low.dense(), mean=mean).fit(X, covariates=Z)
+    np.testing.assert_allclose(one.s, two.s, rtol=1e-5)
+    np.testing.assert_allclose(
+        one._conditioning.centre(X, Z), two._conditioning.centre(X, Z), atol=1e-10
+    )
+
+
+def test_integer_weights_equal_repeated_rows_in_centre_and_scale():
+    generator = spawn(30, 1)[0]
+    X, Z = table(generator, 40, 3), generator.standard_normal((40, 1))
+    weights = generator.integers(0, 4, 40)
+    repeated = np.repeat(np.arange(40), weights)
+    one = GaussianModel("oas").fit(X, covariates=Z, sample_weight=weights)
+    two = GaussianModel("oas").fit(X[repeated], covariates=Z[repeated])
+    np.testing.assert_allclose(
+        one._conditioning.coefficients, two._conditioning.coefficients, atol=1e-10
+    )
+    np.testing.assert_allclose(one._conditioning.scale, two._conditioning.scale, rtol=1e-10)
+    scaled = GaussianModel("oas").fit(X, covariates=Z, sample_weight=10.0 * weights)
+    np.testing.assert_allclose(one.s, scaled.s, rtol=1e-8)
+
+
+def degenerate(generator, n_rows=80):
+    """Columns: 0 constant, 1 ordinary, 2 = -3 * column 4, 3 the covariate again, 5 ordinary."""
+    Z = generator.standard_normal((n_rows, 1))
+    X = generator.standard_normal((n_rows, 6))
+    X[:, 0], X[:, 3] = 0.1, 2.0 - 5.0 * Z[:, 0]
+    X[:, 2] = -3.0 * X[:, 4] + 1.0
+    return X, Z
+
+
+@pytest.mark.parametrize("model", [GaussianModel(), FixedXModel()], ids=["gaussian", "fixed-X"])
+@pytest.mark.parametrize("kind", [np.float64, np.float32])
+def test_features_without_a_copy(model, kind):
+    X, Z = degenerate(spawn(31, 1)[0])
+    X = X.astype(kind)
+    fitted = model.fit(X, covariates=Z)
+    assert fitted.has_copy.tolist() == [False, True, False, False, False, True]
+    assert ((fitted.s > 0) == fitted.has_copy).all()
+    copies = fitted.sample(X, spawn(31, 2)[1], covariates=Z)
+    assert copies.dtype == kind
+    np.testing.assert_array_equal(copies[:, ~fitted.has_copy], X[:, ~fitted.has_copy])
+    assert (np.abs(copies - X)[:, fitted.has_copy].max(0) > 0.1).all()
+
+
+def test_nothing_to_copy():
+    X = np.ones((20, 3))
+    generator = spawn(32, 1)[0]
+    for model in (GaussianModel(), FixedXModel()):
+        fitted = model.fit(X)
+        assert not fitted.has_copy.any()
+        drawn = fitted.draw(X, generator.standard_normal(20), generator)
+        np.testing.assert_array_equal(drawn.copies, X)
+
+
+def test_repeated_columns_are_found_up_to_sign():
+    generator = spawn(33, 1)[0]
+    rows = generator.standard_normal((30, 7))
+    rows[:, 5], rows[:, 6], rows[:, 2] = rows[:, 1], -rows[:, 1], -rows[:, 0]
+    rows /= np.linalg.norm(rows, axis=0)
+    assert list(repeated_columns(rows, np.dtype(np.float64))) == [(0, 2), (1, 5, 6)]
+    rows[:, 6] += 1e-3 * generator.standard_normal(30)
+    rows /= np.linalg.norm(rows, axis=0)
+    assert list(repeated_columns(rows, np.dtype(np.float64))) == [(0, 2), (1, 5)]
+
+
+def test_gaussian_assumptions_tell_what_was_checked():
+    generator = spawn(34, 1)[0]
+    X = table(generator, 100, 10)
+    states = {text: state for text, state, _ in GaussianModel().fit(X).assumptions()}
+    key = "the covariance is estimated from at least 5 rows per feature"
+    assert states[key] == "checked and fine"
+    states = {
+        text: (state, detail) for text, state, detail in GaussianModel().fit(X[:40]).assumptions()
+    }
+    assert states[key][0] == "checked and violated"
+    assert "not guaranteed" in states[key][1]
+    given = GaussianModel(autoregressive(10, 0.6)).fit(X).assumptions()
+    assert given[1][1] == "can't be checked from the data"
+    singular = GaussianModel(np.full((10, 10), 0.5) + 0.5).fit(X).assumptions()
+    assert "mixed in" in singular[-1][2]
+
+
+# --- fixed-X ----------------------------------------------------------------------------------
+
+
+def second_moments(fixed, X, copies, weights=None):
+    root = 1.0 if weights is None else np.sqrt(weights)[:, None]
+    everything = np.column_stack([fixed, X, copies]) * root
+    return everything.T @ everything
+
+
+@pytest.mark.parametrize("method", METHODS)
+@pytest.mark.parametrize("n_covariates", [0, 2])
+def test_fixed_x_moments_are_exact(method, n_covariates):
+    """[1 Z X X~]'[1 Z X X~] stays what it is when any features are swapped with their copies."""
+    generator = spawn(35, 1)[0]
+    n_features = 7
+    n_rows = 2 * n_features + 1 + n_covariates
+    X = 3.0 + table(generator, n_rows, n_features)
+    Z = generator.standard_normal((n_rows, n_covariates))
+    fitted = FixedXModel(method).fit(X, covariates=Z)
+    copies = fitted.sample(X, generator)
+    fixed = np.column_stack([np.ones(n_rows), Z])
+    moments = second_moments(fixed, X, copies)
+    for swapped in ([0], [1, 4], range(n_features)):
+        left, right = X.copy(), copies.copy()
+        left[:, swapped], right[:, swapped] = copies[:, swapped], X[:, swapped]
+        np.testing.assert_allclose(second_moments(fixed, left, right), moments, atol=1e-8)
+    left = X - fixed @ np.linalg.lstsq(fixed, X, rcond=None)[0]
+    moved = left.T @ left - X.T @ copies + X.T @ (X - left)
+    np.testing.assert_allclose(moved, np.diag(fitted.s * (left**2).sum(0)), atol=1e-8)
+
+
+def test_fixed_x_agrees_with_statsmodels():
+    """statsmodels.stats builds equicorrelated copies of unit columns without an intercept.
+
+    Its second moments and s are those of ours for columns orthogonal to the intercept.
+    """
+    generator = spawn(36, 1)[0]
+    X = table(generator, 60, 8, 0.3)
+    X -= X.mean(0)
+    theirs, their_copies, s = _design_knockoff_equi(X, np.random.default_rng(0))
+    fitted = FixedXModel("equicorrelated").fit(theirs)
+    np.testing.assert_allclose(fitted.s, s, rtol=1e-8)
+    copies = fitted.sample(theirs, generator)
+    np.testing.assert_allclose(copies.T @ copies, their_copies.T @ their_copies, atol=1e-8)
+    np.testing.assert_allclose(theirs.T @ copies, theirs.T @ their_copies, atol=1e-8)
+
+
+@pytest.mark.parametrize("weighted", [False, True])
+def test_rotation_fixes_intercept_and_covariates_and_keeps_products(weighted):
+    generator = spawn(37, 1)[0]
+    n_rows, n_features = 31, 7
+    X, Z = table(generator, n_rows, n_features), generator.standard_normal((n_rows, 2))
+    y = X[:, 0] + Z[:, 0] + generator.standard_normal(n_rows)
+    weights = generator.uniform(0.5, 2.0, n_rows) if weighted else None
+    fitted = FixedXModel().fit(X, covariates=Z, sample_weight=weights)
+    drawn = fitted.draw(X, y, generator, covariates=Z, sample_weight=weights)
+    np.testing.assert_array_equal(drawn.covariates, Z)
+    assert np.abs(drawn.features - X).max() > 0.1
+    fixed = np.column_stack([np.ones(n_rows), Z])
+    left, right = (
+        second_moments(fixed, np.column_stack(pair), np.empty((n_rows, 0)), weights)
+        for pair in ((X, y), (drawn.features, drawn.response))
+    )
+    np.testing.assert_allclose(left, right, atol=1e-8)
+    moments = second_moments(fixed, drawn.features, drawn.copies, weights)
+    np.testing.assert_allclose(
+        second_moments(fixed, drawn.copies, drawn.features, weights), moments, atol=1e-8
+    )
+
+
+def test_rotation_is_uniform_on_a_circle():
+    """Two free dimensions: the angle of a rotated column is uniform (Kolmogorov-Smirnov)."""
+    from scipy.stats import kstest
+
+    from sparsesel.knockoffs.fixed_x import _rotate
+
+    basis = np.full((3, 1), 1.0 / np.sqrt(3.0))
+    column = np.array([[1.0], [0.0], [-1.0]])
+    first = np.array([1.0, -1.0, 0.0]) / np.sqrt(2.0)
+    second = np.array([1.0, 1.0, -2.0]) / np.sqrt(6.0)
+    angles = []
+    for generator in spawn(38, 400):
+        moved = _rotate(column, basis, generator)[:, 0]
+        angles.append(np.arctan2(moved @ second, moved @ first) / (2.0 * np.pi) + 0.5)
+    assert kstest(angles, "uniform").pvalue > 1e-4
+
+
+def test_zero_weights_leave_rows_out():
+    generator = spawn(39, 1)[0]
+    X, y = table(generator, 30, 4), generator.standard_normal(30)
+    weights = np.r_[np.zeros(6), np.ones(24)]
+    fitted = FixedXModel().fit(X, sample_weight=weights)
+    np.testing.assert_allclose(fitted.s, FixedXModel().fit(X[6:]).s)
+    drawn = fitted.draw(X, y, generator, sample_weight=weights)
+    assert drawn.features.shape == (24, 4)
+    np.testing.assert_array_equal(fitted.sample(X, generator)[:6], X[:6])
+
+
+def test_missing_rows_are_added():
+    """Below 2p + 1: the products of the features are kept, those of the response grow by chance."""
+    generator = spawn(40, 1)[0]
+    n_rows, n_features = 20, 12
+    X, Z = table(generator, n_rows, n_features), generator.standard_normal((n_rows, 1))
+    y = X[:, 0] + generator.standard_normal(n_rows)
+    fitted = FixedXModel().fit(X, covariates=Z)
+    assert fitted.n_added_rows == 2 * n_features + 2 - n_rows
+    drawn = fitted.draw(X, y, generator, covariates=Z)
+    assert drawn.features.shape == (2 * n_features + 1, n_features)
+    assert drawn.covariates.shape[1] == 0 and drawn.sample_weight is None
+    fixed = np.column_stack([np.ones(n_rows), Z])
+    left = X - fixed @ np.linalg.lstsq(fixed, X, rcond=None)[0]
+    expected = joint_moments(left.T @ left, fitted.s * (left**2).sum(0))
+    both = np.column_stack([drawn.features, drawn.copies])
+    np.testing.assert_allclose(both.T @ both, expected, atol=1e-8)
+    np.testing.assert_allclose(drawn.features.T @ drawn.response, left.T @ y, atol=1e-8)
+    np.testing.assert_allclose(np.column_stack([both, drawn.response]).sum(0), 0.0, atol=1e-8)
+    assert fitted.assumptions()[-1][1] == "checked and violated"
+    with pytest.raises(ValueError, match="10 rows are missing.*Use `draw`"):
+        FixedXModel().fit(X).sample(X[:, :], generator) if False else FixedXModel().fit(
+            X[:15]
+        ).sample(X[:15], generator)
+
+
+def test_added_rows_carry_the_estimated_variance():
+    """Over many draws the added part of |y|^2 averages sigma^2 per added row."""
+    generator = spawn(41, 1)[0]
+    X = table(generator, 20, 12)
+    y = X[:, 0] + 2.0 * generator.standard_normal(20)
+    fitted = FixedXModel().fit(X)
+    design = np.column_stack([np.ones(20), X])
+    left = y - design @ np.linalg.lstsq(design, y, rcond=None)[0]
+    variance = left @ left / (20 - 13)
+    centred = ((y - y.mean()) ** 2).sum()
+    added = [np.sum(fitted.draw(X, y, source).response ** 2) - centred for source in spawn(42, 300)]
+    count = fitted.n_added_rows
+    error = variance * np.sqrt(2.0 * count / len(added))
+    assert abs(np.mean(added) - variance * count) < 4.0 * error
+
+
+# --- bad input --------------------------------------------------------------------------------
+
+
+def test_bad_input_is_refused():
+    generator = spawn(43, 1)[0]
+    X = table(generator, 30, 5)
+    with pytest.raises(ValueError, match="'shrunk' is unknown; allowed are 'ledoit_wolf'"):
+        GaussianModel("shrunk").fit(X)
+    with pytest.raises(ValueError, match=r"shape \(4, 4\) was given for 5 features"):
+        GaussianModel(np.eye(4)).fit(X)
+    with pytest.raises(ValueError, match=r"mean of shape \(4,\)"):
+        GaussianModel(np.eye(5), mean=np.zeros(4)).fit(X)
+    with pytest.raises(ValueError, match="covariates have 29 rows and the features 30"):
+        GaussianModel().fit(X, covariates=np.ones((29, 1)))
+    with pytest.raises(ValueError, match="one weight of at least 0 per row"):
+        GaussianModel().fit(X, sample_weight=-np.ones(30))
+    with pytest.raises(ValueError, match="Give fewer covariates or more rows"):
+        GaussianModel().fit(X, covariates=generator.standard_normal((30, 29)))
+    with pytest.raises(ValueError, match=r"need at least 7.*model-X"):
+        FixedXModel().fit(X[:6])
+    with pytest.raises(ValueError, match=r"need at least 11.*model-X"):
+        FixedXModel(add_rows=False).fit(X[:10])
+    follows = np.column_stack([X, X @ np.ones(5)])
+    with pytest.raises(ValueError, match="linear combinations of others"):
+        FixedXModel().fit(follows)
+    with pytest.raises(ValueError, match="Fit the model to these rows"):
+        FixedXModel().fit(X).sample(X[:20], generator)
