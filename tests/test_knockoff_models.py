@@ -433,10 +433,8 @@ def test_missing_rows_are_added():
     np.testing.assert_allclose(drawn.features.T @ drawn.response, left.T @ y, atol=1e-8)
     np.testing.assert_allclose(np.column_stack([both, drawn.response]).sum(0), 0.0, atol=1e-8)
     assert fitted.assumptions()[-1][1] == "checked and violated"
-    with pytest.raises(ValueError, match="10 rows are missing.*Use `draw`"):
-        FixedXModel().fit(X).sample(X[:, :], generator) if False else FixedXModel().fit(
-            X[:15]
-        ).sample(X[:15], generator)
+    with pytest.raises(ValueError, match=r"6 rows are missing.*Use `draw`"):
+        fitted.sample(X, generator, covariates=Z)
 
 
 def test_added_rows_carry_the_estimated_variance():
