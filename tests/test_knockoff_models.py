@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from scipy.stats import ks_2samp, kstest
 from sklearn.covariance import OAS, LedoitWolf
 from statsmodels.stats._knockoff import _design_knockoff_equi
 
@@ -11,6 +12,7 @@ from sparsesel.knockoffs import FixedXModel, GaussianModel, LowRankCovariance, s
 from sparsesel.knockoffs._gaussian_draws import DenseDraws, LowRankDraws, safe_root
 from sparsesel.knockoffs._model import repeated_columns
 from sparsesel.knockoffs.covariances import ESTIMATORS, number_of_factors
+from sparsesel.knockoffs.fixed_x import _random_basis
 from sparsesel.tasks import spawn
 
 METHODS = ("mvr", "max_entropy", "sdp", "equicorrelated")
@@ -387,20 +389,32 @@ def test_rotation_fixes_intercept_and_covariates_and_keeps_products(weighted):
 
 
 def test_rotation_is_uniform_on_a_circle():
-    """Two free dimensions: the angle of a rotated column is uniform (Kolmogorov-Smirnov)."""
-    from scipy.stats import kstest
-
-    from sparsesel.knockoffs.fixed_x import _rotate
-
-    basis = np.full((3, 1), 1.0 / np.sqrt(3.0))
-    column = np.array([[1.0], [0.0], [-1.0]])
+    """Two free dimensions: the angle of a random unit column is uniform (Kolmogorov-Smirnov)."""
+    fixed = np.full((3, 1), 1.0 / np.sqrt(3.0))
     first = np.array([1.0, -1.0, 0.0]) / np.sqrt(2.0)
     second = np.array([1.0, 1.0, -2.0]) / np.sqrt(6.0)
     angles = []
     for generator in spawn(38, 400):
-        moved = _rotate(column, basis, generator)[:, 0]
-        angles.append(np.arctan2(moved @ second, moved @ first) / (2.0 * np.pi) + 0.5)
+        column = _random_basis(fixed, 1, generator)[:, 0]
+        np.testing.assert_allclose([column.sum(), column @ column], [0.0, 1.0], atol=1e-12)
+        angles.append(np.arctan2(column @ second, column @ first) / (2.0 * np.pi) + 0.5)
     assert kstest(angles, "uniform").pvalue > 1e-4
+
+
+def test_rotated_and_unrotated_draws_have_one_distribution():
+    """[X X~]'y, which decides every sufficient importance, by a two-sample Kolmogorov-Smirnov."""
+    generator = spawn(44, 1)[0]
+    X = table(generator, 12, 3)
+    y = X[:, 0] + generator.standard_normal(12)
+    fitted = FixedXModel().fit(X)
+    centred = y - y.mean()
+    plain = np.array([fitted.sample(X, source).T @ centred for source in spawn(45, 400)])
+    rotated = []
+    for source in spawn(46, 400):
+        drawn = fitted.draw(X, y, source)
+        rotated.append(drawn.copies.T @ (drawn.response - drawn.response.mean()))
+    for one, two in zip(plain.T, np.array(rotated).T, strict=True):
+        assert ks_2samp(one, two).pvalue > 1e-4
 
 
 def test_zero_weights_leave_rows_out():
@@ -433,10 +447,8 @@ def test_missing_rows_are_added():
     np.testing.assert_allclose(drawn.features.T @ drawn.response, left.T @ y, atol=1e-8)
     np.testing.assert_allclose(np.column_stack([both, drawn.response]).sum(0), 0.0, atol=1e-8)
     assert fitted.assumptions()[-1][1] == "checked and violated"
-    with pytest.raises(ValueError, match="10 rows are missing.*Use `draw`"):
-        FixedXModel().fit(X).sample(X[:, :], generator) if False else FixedXModel().fit(
-            X[:15]
-        ).sample(X[:15], generator)
+    with pytest.raises(ValueError, match=r"6 rows are missing.*Use `draw`"):
+        fitted.sample(X, generator, covariates=Z)
 
 
 def test_added_rows_carry_the_estimated_variance():

@@ -204,7 +204,7 @@ def ridge_by_hand(X, y, weight, covariates, candidates):
     A = root * np.column_stack([np.ones(len(y)), X[:, covariates]])
     Z = root * X[:, candidates] / s
     target = root[:, 0] * y
-    top = np.linalg.svd(Z - A @ np.linalg.lstsq(A, Z)[0], compute_uv=False)[0] ** 2
+    top = np.linalg.svd(Z - A @ np.linalg.lstsq(A, Z, rcond=None)[0], compute_uv=False)[0] ** 2
     n_rows, best = weight.sum(), (np.inf, None)
     for penalty in top * np.geomspace(1e3, 1e-6, 100):
         M = np.hstack([A, Z])
@@ -242,7 +242,7 @@ def test_marginal_slopes_are_simple_regressions():
     sizes = initial_sizes("marginal", initial_problem(X, y, penalty_weights=given))[0]
     for j in (0, 12):
         A = np.column_stack([X[:, j], np.ones(30), X[:, 7]])
-        slope = np.linalg.lstsq(A, y)[0][0]
+        slope = np.linalg.lstsq(A, y, rcond=None)[0][0]
         assert sizes[j] == pytest.approx(abs(slope) * X[:, j].std(), rel=1e-8)
     assert sizes[7] == sizes[9] == 0
 
@@ -383,6 +383,7 @@ def test_the_groups_reach_a_splitter():
     ("keywords", "fit", "said"),
     [
         ({"cv": 5}, {"groups": [0, 1, 2, 3] * 20}, ["4 groups", "cv=4", "ebic"]),
+        ({}, {"groups": [0] * 80}, ["1 groups", "at least 2", "ebic"]),
         ({"cv": 90}, {}, ["80 rows", "cv=80"]),
         ({"cv": ShuffleSplit(1, random_state=0)}, {}, ["1 split", "two are needed"]),
         ({"cv": [([0, 1, 2], []), ([3, 4], [5])]}, {}, ["Fold 1 has no row", "hold out"]),
@@ -406,7 +407,8 @@ def test_a_fold_without_a_class_is_refused():
         AdaptiveLassoSelector(cv=KFold(4)).fit(X, y)
     y[3:] = "no"
     with pytest.raises(ValueError, match=r"cv=5 folds, but the table has 3 rows of the rarer"):
-        AdaptiveLassoSelector().fit(X, y)
+        AdaptiveLassoSelector(cv=5).fit(X, y)
+    assert AdaptiveLassoSelector().fit(X, y).loss_path_.shape == (100, 3)
 
 
 def test_one_standard_error_rule():
@@ -490,7 +492,7 @@ def test_share_of_paths_that_contain_the_true_model(n, sigma, shares, repetition
     for rng in np.random.default_rng(20060).spawn(repetitions):
         X = rng.standard_normal((n, 4)) @ root.T
         y = X @ beta + sigma * rng.standard_normal(n)
-        sizes = np.abs(np.linalg.lstsq(X, y)[0])[None, :]
+        sizes = np.abs(np.linalg.lstsq(X, y, rcond=None)[0])[None, :]
         weights = np.vstack([adaptive_weights(sizes, g) if g else np.ones((1, 4)) for g in shares])
         problems = Problems(
             loss="squared_error", response=y, penalty_weights=weights, fit_intercept=False

@@ -70,6 +70,8 @@ def test_column_specifications(spec, expected):
     ("spec", "said"),
     [
         ("p-tau", ["'p-tau'", "6 columns", "close to it: 'p_tau'", "set_output", "sparse_output"]),
+        ("TAU", ["'TAU'", "close to it: 'tau'", "'p_tau'"]),
+        ("site", ["close to it: ", "'site_A'", "'site_B'"]),
         ("zzz", ["none is close to it", "feature_names_in_"]),
         (6, ["position 6", "6 columns", "-6 to 5"]),
         ([True, False], ["mask of length 2", "6 columns"]),

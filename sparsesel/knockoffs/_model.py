@@ -165,6 +165,12 @@ def condition(X: np.ndarray, covariates: np.ndarray, weights: np.ndarray) -> Con
     notes = _noted("constant", ~varying)
 
     fixed = np.column_stack([np.ones(len(X)), covariates])
+    if len(X) < fixed.shape[1] + 2:
+        raise ValueError(
+            f"{len(X)} rows of positive weight were given with {fixed.shape[1]} columns of "
+            "intercept and covariates; at least two more rows than these are needed. Give fewer "
+            "covariates or more rows."
+        )
     _, spread = _regress(X, fixed, root)
     free = varying & (spread > _DETERMINED[precision] * deviation)
     notes += _noted("determined by the covariates", varying & ~free)
@@ -181,12 +187,6 @@ def condition(X: np.ndarray, covariates: np.ndarray, weights: np.ndarray) -> Con
     fixed = np.column_stack([fixed, X[:, repeated]])
     coefficients, left = _regress(X, fixed, root)
     has_copy = free & ~members & (left > _DETERMINED[precision] * deviation)
-    if has_copy.any() and len(X) < fixed.shape[1] + 2:
-        raise ValueError(
-            f"{len(X)} rows of positive weight were given with {fixed.shape[1]} columns to "
-            "condition on (intercept, covariates and repeated features); at least two more rows "
-            "than these are needed. Give fewer covariates or more rows."
-        )
     return Conditioning(has_copy, repeated, coefficients[:, has_copy], left[has_copy], tuple(notes))
 
 

@@ -13,9 +13,9 @@ is swapped with its copy.  Room for U needs n >= 2 p + 1 + covariates.
 **Rotation.**  An importance is antisymmetric only if it depends on the table through [X X~]'[X X~]
 and [X X~]'y.  A penalty chosen by cross-validation depends on more: on which row lies in which
 fold.  Multiplying [X X~ y] by a random orthogonal matrix that fixes the intercept and the
-covariates makes the rows carry nothing beyond these products.  The matrix is never formed: with
-Q R the part of [X X~ y] orthogonal to what is fixed (Q orthonormal), its random rotation is W R, W
-uniform among the orthonormal bases orthogonal to what is fixed.
+covariates makes the rows carry nothing beyond these products.  The matrix is never formed: where
+R'R are the products of the parts of [X X~ y] orthogonal to what is fixed, the rotated parts are
+W R, W uniform among the orthonormal bases orthogonal to what is fixed.
 
 **Below 2 p + 1 + covariates** rows are added (the same paper, section 2.1.2): features 0, response
 N(0, sigma^2), as many as are missing, sigma estimated by least squares.  With the estimate the
@@ -43,6 +43,7 @@ from sparsesel.knockoffs._model import (
     as_covariates,
     as_weights,
     condition,
+    pair,
 )
 from sparsesel.knockoffs.s_vectors import SVector, SVectorStatus, solve_s_vector
 
@@ -241,7 +242,9 @@ class FittedFixedX:
         copies = np.array(X, dtype=np.float32 if X.dtype == np.float32 else np.float64)
         if part.draws is not None:
             span = np.column_stack([part.basis, part.own])
-            moved = self._moved(part.left, span, generator) * part.length + part.explained
+            free = _random_basis(span, part.left.shape[1], generator)
+            moved = part.left - part.left @ part.draws.shift + free @ part.draws.root.T
+            moved = moved * part.length + part.explained
             copies[np.ix_(part.seen, self.has_copy)] = moved / part.root
         return copies
 
@@ -274,52 +277,71 @@ class FittedFixedX:
         PairedTable
             Of the rows of positive weight; with added rows, without covariates and weights.
         """
+        part = self._projected
+        if part.draws is None:
+            return pair(X, np.array(X), y, covariates, sample_weight)
+        response = np.asarray(y, dtype=np.float64)[part.seen] * part.root[:, 0]
+        joint = self._joint_root(response, generator)
         if self.n_added_rows:
-            return self._augmented(np.asarray(y, dtype=np.float64), generator)
-        part, n_copied = self._projected, int(self.has_copy.sum())
-        copies = np.array(self.sample(X, generator)[part.seen], dtype=np.float64)
-        features = np.array(X[part.seen], dtype=np.float64)
-        response = np.asarray(y, dtype=np.float64)[part.seen]
-        # features without a copy lie in the span of what the rotation fixes
-        moving = [features[:, self.has_copy], copies[:, self.has_copy], response]
-        rotated = _rotate(np.column_stack(moving) * part.root, part.basis, generator) / part.root
-        features[:, self.has_copy] = rotated[:, :n_copied]
-        copies[:, self.has_copy] = rotated[:, n_copied:-1]
+            # one row more than there are dimensions, so that an intercept changes nothing
+            n_rows = 2 * int(self.has_copy.sum()) + 1
+            fixed = np.full((n_rows, 1), 1.0 / np.sqrt(n_rows))
+            rotated = _random_basis(fixed, len(joint), generator) @ joint
+            wide = np.zeros((n_rows, len(self.has_copy)))
+            return self._apart(rotated, wide, np.empty((n_rows, 0)), None)
+        explained = part.basis @ (part.basis.T @ response)
+        rotated = _random_basis(part.basis, len(joint), generator) @ joint
+        rotated += np.column_stack([part.explained, part.explained, explained])
         weight = None if sample_weight is None else np.asarray(sample_weight)[part.seen]
         Z = as_covariates(covariates, len(X))[part.seen]
-        return PairedTable(features, copies, rotated[:, -1], Z, weight)
+        wide = np.array(X[part.seen], dtype=np.float64)
+        return self._apart(rotated / part.root, wide, Z, weight)
 
-    def _moved(
-        self, left: np.ndarray, span: np.ndarray, generator: np.random.Generator
-    ) -> np.ndarray:
-        """Equation (1) for unit columns; ``span`` is a basis of them and of what is fixed."""
-        draws = self._projected.draws
-        assert draws is not None
-        free = _random_basis(span, left.shape[1], generator)
-        return left - left @ draws.shift + free @ draws.root.T
+    def _joint_root(self, response: np.ndarray, generator: np.random.Generator) -> np.ndarray:
+        """R with R'R the products of [X X~ y], all orthogonal to what is fixed.
 
-    def _augmented(self, y: np.ndarray, generator: np.random.Generator) -> PairedTable:
-        """Add the missing rows in the space orthogonal to what is fixed, then rotate."""
-        part, count = self._projected, self.n_added_rows
-        response = y[part.seen] * part.root[:, 0]
+        In an orthonormal frame of the features, of U, and of the rest, the columns are
+
+            X = (A, 0, 0),    X~ = (A (I - Sigma^-1 S), C, 0),    y = (c, u, r),
+
+        and as U is uniform, (u, r) is the part of y that the features leave, turned at random.
+        Added rows enlarge that part by sigma^2 times a chi-squared variable.
+        """
+        part = self._projected
+        assert part.draws is not None
+        n_copied = part.own.shape[1]
         response = response - part.basis @ (part.basis.T @ response)
-        unexplained = response - part.own @ (part.own.T @ response)
-        freedom = len(response) - part.basis.shape[1] - part.own.shape[1]
-        sigma = np.linalg.norm(unexplained) / np.sqrt(freedom)
-        response = np.concatenate([response, sigma * generator.standard_normal(count)])
-        span = np.column_stack([part.basis, part.own])
-        left = np.vstack([part.left, np.zeros((count, part.left.shape[1]))])
-        copies = self._moved(left, np.vstack([span, np.zeros((count, span.shape[1]))]), generator)
-        # one row more than there are dimensions, so that an intercept changes nothing
-        free = len(left) - part.basis.shape[1]
-        ones = np.full((free + 1, 1), 1.0 / np.sqrt(free + 1))
-        moving = np.column_stack([left * part.length, copies * part.length, response])
-        rotated = _embed(_root(moving, free), ones, generator)
-        n_copied = left.shape[1]
-        pair = np.zeros((2, free + 1, len(self.has_copy)))
-        pair[0][:, self.has_copy] = rotated[:, :n_copied]
-        pair[1][:, self.has_copy] = rotated[:, n_copied:-1]
-        return PairedTable(pair[0], pair[1], rotated[:, -1], np.empty((free + 1, 0)), None)
+        along = part.own.T @ response
+        square = float(np.sum((response - part.own @ along) ** 2))
+        freedom = len(response) - part.basis.shape[1] - n_copied
+        if self.n_added_rows:
+            square *= 1.0 + generator.chisquare(self.n_added_rows) / freedom
+        rest = max(freedom, n_copied) - n_copied
+        turned = generator.standard_normal(n_copied + 1)
+        turned[-1] = np.sqrt(generator.chisquare(rest)) if rest else 0.0
+        turned *= np.sqrt(square) / np.linalg.norm(turned)
+
+        joint = np.zeros((2 * n_copied + (rest > 0), 2 * n_copied + 1))
+        inner = part.own.T @ part.left
+        joint[:n_copied, :n_copied] = inner * part.length
+        joint[:n_copied, n_copied:-1] = (inner - inner @ part.draws.shift) * part.length
+        joint[n_copied : 2 * n_copied, n_copied:-1] = part.draws.root.T * part.length
+        joint[:n_copied, -1] = along
+        joint[n_copied:, -1] = turned[: len(joint) - n_copied]
+        return joint
+
+    def _apart(
+        self,
+        columns: np.ndarray,
+        features: np.ndarray,
+        covariates: np.ndarray,
+        weight: np.ndarray | None,
+    ) -> PairedTable:
+        """Take [X X~ y] apart; features without a copy lie in what is fixed and stay."""
+        copies, n_copied = features.copy(), int(self.has_copy.sum())
+        features[:, self.has_copy] = columns[:, :n_copied]
+        copies[:, self.has_copy] = columns[:, n_copied:-1]
+        return PairedTable(features, copies, columns[:, -1], covariates, weight)
 
     def assumptions(self) -> Assumptions:
         """What the model assumes: (statement, state, detail) each."""
@@ -360,23 +382,3 @@ def _random_basis(fixed: np.ndarray, count: int, generator: np.random.Generator)
     columns, triangle = np.linalg.qr(free)
     # signs that make the triangle's diagonal positive turn Householder's basis into a uniform one
     return columns * np.where(np.diagonal(triangle) < 0, -1.0, 1.0)
-
-
-def _root(columns: np.ndarray, rank: int) -> np.ndarray:
-    """R with R'R = columns'columns, of at most ``rank`` rows, which bounds the rank of columns."""
-    if columns.shape[1] <= rank:
-        return np.asarray(np.linalg.qr(columns, mode="r"))
-    _, size, right = np.linalg.svd(columns, full_matrices=False)
-    return size[:rank, None] * right[:rank]
-
-
-def _embed(root: np.ndarray, fixed: np.ndarray, generator: np.random.Generator) -> np.ndarray:
-    """Random columns orthogonal to ``fixed`` whose products are those of the root."""
-    return _random_basis(fixed, len(root), generator) @ root
-
-
-def _rotate(columns: np.ndarray, basis: np.ndarray, generator: np.random.Generator) -> np.ndarray:
-    """Rotate columns by a random orthogonal matrix that fixes the span of ``basis``."""
-    explained = basis @ (basis.T @ columns)
-    root = _root(columns - explained, len(columns) - basis.shape[1])
-    return explained + _embed(root, basis, generator)

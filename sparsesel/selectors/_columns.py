@@ -288,12 +288,21 @@ def _position_of_name(name: str, table: Table, argument: str) -> int:
             f"{type(table.original).__name__} without column names. Give positions, or a pandas or "
             f"polars table whose names are all str. {_KEEP_NAMES}."
         )
-    close = difflib.get_close_matches(name, [str(known) for known in table.names], n=3)
+    close = _close_names(name, [str(known) for known in table.names])
     hint = f"close to it: {', '.join(map(repr, close))}" if close else "none is close to it"
     raise ValueError(
         f"{argument} names {name!r}, which is not among the {table.n_columns} columns of the "
         f"table; {hint}. Names must match feature_names_in_ exactly. {_KEEP_NAMES}."
     )
+
+
+def _close_names(name: str, known: Sequence[str]) -> list[str]:
+    """Up to three known names that contain the wanted one, whatever the case, or resemble it."""
+    wanted = name.lower()
+    containing = [other for other in known if wanted and wanted in other.lower()]
+    by_lower = {other.lower(): other for other in known}
+    alike = [by_lower[other] for other in difflib.get_close_matches(wanted, by_lower, n=3)]
+    return list(dict.fromkeys([*alike, *containing]))[:3]
 
 
 def _resolve_weights(

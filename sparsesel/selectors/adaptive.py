@@ -118,8 +118,9 @@ class AdaptiveLassoSelector(BaseSparseSelector):
     l1_ratio : float in (0, 1], default=1.0
         Share of the absolute-value penalty.
     cv : int, splitter or iterable, default=None
-        How rows are split, as in scikit-learn. None is 5 folds, an int that many: stratified with
-        log loss, whole groups where `groups` are given. A splitter is passed the groups.
+        How rows are split, as in scikit-learn. An int is that many folds, None 5, or fewer where
+        the rarer class or the groups do not suffice: stratified with log loss, whole groups where
+        `groups` are given. A splitter is passed the groups.
     <common parameters>
     tol : float, default=1e-7
         Largest relative duality gap of a solution.
@@ -385,7 +386,7 @@ class AdaptiveLassoSelector(BaseSparseSelector):
     def _folds(self, data: FitInput) -> NDArray[np.bool_]:
         """Masks (K, n) of the held-out rows of every fold."""
         if self.cv is None or isinstance(self.cv, Integral):
-            n_folds = _DEFAULT_FOLDS if self.cv is None else int(self.cv)
+            n_folds = None if self.cv is None else int(self.cv)
             rows, splits = data.rows, _default_splits(data, n_folds)
         else:
             rows = np.arange(data.n_rows)
@@ -539,8 +540,11 @@ def _row_weights(data: FitInput, held_out: NDArray[np.bool_]) -> FloatArray:
     return np.vstack([data.weights, np.where(held_out, 0.0, data.weights)])
 
 
-def _default_splits(data: FitInput, n_folds: int) -> Any:
-    """Splits of the rows with weight into folds, by class with log loss, by group with groups."""
+def _default_splits(data: FitInput, n_folds: int | None) -> Any:
+    """Splits of the rows with weight into folds, by class with log loss, by group with groups.
+
+    Without a number given there are five folds, or as many as the rarer class or the groups allow.
+    """
     rows = data.rows
     labels = data.labels[rows]
     groups = None if data.groups is None else data.groups[rows]
@@ -549,6 +553,8 @@ def _default_splits(data: FitInput, n_folds: int) -> Any:
     if stratified and groups is None:
         rarer = int(min(np.sum(data.response[rows] == value) for value in (0, 1)))
         units, what = rarer, "rows of the rarer class"
+    if n_folds is None:
+        n_folds = max(2, min(_DEFAULT_FOLDS, units))
     if units < n_folds:
         remedy = f"cv={units}, or " if units >= 2 else ""
         raise ValueError(

@@ -315,7 +315,7 @@ class NullModelFallback(MetaEstimatorMixin, BaseEstimator):
 
 
 def _without_columns(X: Any) -> bool:
-    shape = X.shape if hasattr(X, "shape") else np.shape(X)
+    shape = X.shape if hasattr(X, "shape") else np.asarray(X).shape
     return len(shape) == 2 and shape[1] == 0
 
 
