@@ -19,6 +19,7 @@ from __future__ import annotations
 import functools
 import warnings
 from dataclasses import dataclass, field, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -268,7 +269,7 @@ def _solve_chunk(design: DesignMatrix, options: _Options, item: _Item) -> BankRe
 def _joined(parts: list[BankResult]) -> BankResult:
     """One result from those of the chunks, in order."""
 
-    def stack(name: str) -> NDArray | None:
+    def stack(name: str) -> Any:
         arrays = [getattr(part, name) for part in parts]
         return None if arrays[0] is None else np.concatenate(arrays)
 

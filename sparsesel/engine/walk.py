@@ -63,7 +63,8 @@ class Walk:
         self.answers = _Answers(chunk, shape)
         self.entries = np.full((shape[0], keep.entries), -1, np.int64)
         self._entered = np.zeros(shape[0], np.int64)
-        self._unit_of = np.arange(p) if keep.entry_units is None else keep.entry_units
+        units = np.arange(p) if keep.entry_units is None else keep.entry_units
+        self._unit_of = np.asarray(units, dtype=np.int64)
         n_units = int(self._unit_of.max(initial=-1)) + 1 if keep.entries else 0
         self._seen = np.zeros((shape[0], n_units), np.bool_)
         # With a null objective of zero every penalised coefficient is zero, provably.
@@ -228,8 +229,8 @@ class _Answers:
         centre = np.zeros(loads.shape[0])
         if chunk.basis.fit_intercept:
             products = values * chunk.design.centres[columns]
-            centre = np.bincount(owners, products, minlength=loads.shape[0])
-        for b in problems:
+            np.add.at(centre, owners, products)
+        for b in map(int, problems):
             self.intercept[b, k] = self._unpenalised(k, b, loads[b]) - centre[b]
 
     def _unpenalised(self, k: int, b: int, load: FloatArray) -> float:
