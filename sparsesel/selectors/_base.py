@@ -372,8 +372,8 @@ class BaseSparseSelector(SelectorMixin, BaseEstimator):
         validate_data(self, X, reset=False, skip_check_array=True)
         support = self.get_support()
         if not support.any():
-            self._transform(np.empty((1, self.n_features_in_)))  # for scikit-learn's warning
-        # Dropping keeps the number of rows where no column is left; selecting none does not.
+            # A frame that lost its last column may have lost its rows too; an array has not.
+            return self._transform(np.broadcast_to(0.0, X.shape))
         kept = X.drop([name for name, keep in zip(X.columns, support, strict=True) if not keep])
         if configured_container(self) == "polars":
             return kept
