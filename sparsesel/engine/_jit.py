@@ -20,7 +20,7 @@ Function = TypeVar("Function", bound=Callable[..., Any])
 
 
 def _compile(function: Function, fastmath: set[str] | bool) -> Function:
-    options = {"nogil": True, "error_model": "numpy", "fastmath": fastmath}
+    options: dict[str, Any] = {"nogil": True, "error_model": "numpy", "fastmath": fastmath}
     try:
         return numba.njit(cache=True, **options)(function)
     except RuntimeError:

@@ -19,16 +19,18 @@ from __future__ import annotations
 import functools
 import warnings
 from dataclasses import dataclass, field, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy import sparse
 from sklearn.exceptions import ConvergenceWarning
 
-from sparsesel.engine.chunk import Walk, open_chunk
+from sparsesel.engine.chunk import open_chunk
 from sparsesel.engine.design import DesignMatrix, FloatArray
 from sparsesel.engine.losses import LOSSES
 from sparsesel.engine.status import Status
+from sparsesel.engine.walk import Walk
 from sparsesel.tasks import TaskSettings, run_tasks
 
 #: Changes whenever the same problem may get other bits, so that stored results expire.
@@ -249,7 +251,6 @@ def _solve_chunk(design: DesignMatrix, options: _Options, item: _Item) -> BankRe
         alphas = np.broadcast_to(item.alphas, (largest.size, item.alphas.shape[-1]))
     walk = Walk(chunk, loss, np.ascontiguousarray(alphas), item.keep, options.tol)
     walk.run()
-    shape = (alphas.shape[1], design.n_columns)
     return BankResult(
         alphas=walk.alphas,
         alpha_max=largest,
@@ -258,29 +259,17 @@ def _solve_chunk(design: DesignMatrix, options: _Options, item: _Item) -> BankRe
         gap=walk.gap,
         status=walk.status,
         n_iter=walk.n_iter,
-        intercept=walk.intercept,
-        coef=tuple(_csr(answers, shape) for answers in walk.answers)
-        if item.keep.coefficients
-        else None,
+        intercept=walk.answers.intercept,
+        coef=walk.answers.matrices() if item.keep.coefficients else None,
         entry_order=walk.entries if item.keep.entries else None,
         held_out_loss=walk.held_out,
     )
 
 
-def _csr(
-    answers: list[tuple[NDArray[np.int64], FloatArray]], shape: tuple[int, int]
-) -> sparse.csr_array:
-    lengths = [columns.size for columns, _ in answers] + [0] * (shape[0] - len(answers))
-    indptr = np.concatenate([[0], np.cumsum(lengths)])
-    indices = np.concatenate([columns for columns, _ in answers])
-    data = np.concatenate([values for _, values in answers])
-    return sparse.csr_array((data, indices, indptr), shape=shape)
-
-
 def _joined(parts: list[BankResult]) -> BankResult:
     """One result from those of the chunks, in order."""
 
-    def stack(name: str) -> NDArray | None:
+    def stack(name: str) -> Any:
         arrays = [getattr(part, name) for part in parts]
         return None if arrays[0] is None else np.concatenate(arrays)
 

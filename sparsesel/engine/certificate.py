@@ -25,23 +25,24 @@ from sparsesel.engine._jit import exact_kernel
 
 
 @exact_kernel
-def _excess(size, gradient, order_one, order_two, alpha, l1_ratio, outside, weight_one, weight_two):
+def _excess(size, gradient, order_one, order_two, alpha, l1_ratio, found, values, all_one, all_two):
     """Largest |g| / (alpha rho l1), at least 1, and the conjugate at t = 1.
 
-    Over the working columns and those outside whose gradient had to be known exactly
-    (``outside``, with their penalties); all others are bounded under their limits.
+    Over the working columns (with their penalties ``order_one``, ``order_two``) and those
+    outside that had to be known exactly: columns ``found`` with gradients ``values``, with
+    penalties looked up in ``all_one`` and ``all_two``. All others are bounded under theirs.
     """
     excess = 1.0
     conjugate = 0.0
-    for position in range(size + outside.size):
+    for position in range(size + found.size):
         if position < size:
             magnitude = abs(gradient[position])
             one = order_one[position]
             two = order_two[position]
         else:
-            magnitude = abs(outside[position - size])
-            one = weight_one[position - size]
-            two = weight_two[position - size]
+            magnitude = abs(values[position - size])
+            one = all_one[found[position - size]]
+            two = all_two[found[position - size]]
         limit = alpha * l1_ratio * one
         if not magnitude <= limit:
             # Once a NaN, always a NaN: no comparison with it is true.
@@ -107,37 +108,41 @@ def _primal_log(weights, signs, predictor):
 
 @exact_kernel
 def certify_squared(
-    alpha, l1_ratio, null, weights, residual, centred, size, gradient, order_one, order_two, coef,
-    outside, weight_one, weight_two,
+    problems, alpha, l1_ratio, null, weights, residual, centred, size, gradient, order_one,
+    order_two, coef, found, totals, values, all_one, all_two, gap,
 ):  # fmt: skip
-    """Relative gap of one squared-error problem; see ``_excess`` for the columns."""
-    excess, conjugate = _excess(
-        size, gradient, order_one, order_two, alpha, l1_ratio, outside, weight_one, weight_two
-    )
-    primal = _primal_squared(weights, residual) + _penalty(
-        size, coef, order_one, order_two, alpha, l1_ratio
-    )
-    gap = primal - _dual_squared(weights, residual, centred, 1.0 / excess)
-    if l1_ratio < 1.0:
-        other = primal - _dual_squared(weights, residual, centred, 1.0) + conjugate
-        gap = other if other < gap else gap
-    return gap / null
+    """Write the relative gaps of the named squared-error problems; columns as in ``_excess``."""
+    for b in problems:
+        excess, conjugate = _excess(
+            size[b], gradient[b], order_one[b], order_two[b], alpha[b], l1_ratio,
+            found[b, : totals[b]], values[b], all_one[b], all_two[b],
+        )  # fmt: skip
+        primal = _primal_squared(weights[b], residual[b]) + _penalty(
+            size[b], coef[b], order_one[b], order_two[b], alpha[b], l1_ratio
+        )
+        found_gap = primal - _dual_squared(weights[b], residual[b], centred[b], 1.0 / excess)
+        if l1_ratio < 1.0:
+            other = primal - _dual_squared(weights[b], residual[b], centred[b], 1.0) + conjugate
+            found_gap = other if other < found_gap else found_gap
+        gap[b] = found_gap / null[b]
 
 
 @exact_kernel
 def certify_log(
-    alpha, l1_ratio, null, weights, residual, signs, predictor, offset, size, gradient, order_one,
-    order_two, coef, outside, weight_one, weight_two,
+    problems, alpha, l1_ratio, null, weights, residual, signs, predictor, offset, size, gradient,
+    order_one, order_two, coef, found, totals, values, all_one, all_two, gap,
 ):  # fmt: skip
-    """Relative gap of one log-loss problem; see ``_excess`` for the columns."""
-    excess, conjugate = _excess(
-        size, gradient, order_one, order_two, alpha, l1_ratio, outside, weight_one, weight_two
-    )
-    primal = _primal_log(weights, signs, predictor) + _penalty(
-        size, coef, order_one, order_two, alpha, l1_ratio
-    )
-    gap = primal - _dual_log(weights, residual, offset, 1.0 / excess)
-    if l1_ratio < 1.0:
-        other = primal - _dual_log(weights, residual, offset, 1.0) + conjugate
-        gap = other if other < gap else gap
-    return gap / null
+    """Write the relative gaps of the named log-loss problems; columns as in ``_excess``."""
+    for b in problems:
+        excess, conjugate = _excess(
+            size[b], gradient[b], order_one[b], order_two[b], alpha[b], l1_ratio,
+            found[b, : totals[b]], values[b], all_one[b], all_two[b],
+        )  # fmt: skip
+        primal = _primal_log(weights[b], signs[b], predictor[b]) + _penalty(
+            size[b], coef[b], order_one[b], order_two[b], alpha[b], l1_ratio
+        )
+        found_gap = primal - _dual_log(weights[b], residual[b], offset, 1.0 / excess)
+        if l1_ratio < 1.0:
+            other = primal - _dual_log(weights[b], residual[b], offset, 1.0) + conjugate
+            found_gap = other if other < found_gap else found_gap
+        gap[b] = found_gap / null[b]

@@ -1,23 +1,11 @@
-"""One chunk of problems, solved in step along their grids of penalties.
+"""The state of one chunk of problems that are solved in step along their grids.
 
 Every problem keeps a working set of columns, starts each penalty from the answer to the
 one before, and is done when the duality gap over *all* columns is small enough.  What the
 problems of a chunk share is the product of the table with their residuals, one matrix
 product for all that need one, and the pool of gathered columns.
 
-A round at penalty a_k:
-
-1. columns that pass the sequential strong rule |g_j| >= rho v_j s_j (2 a_k - a_{k-1}) at
-   the last gradient join the working set, the largest first and at most a share of the
-   support (Tibshirani et al. 2012, section 7; a heuristic, so exact checks follow);
-2. the working sets are solved;
-3. kept gradients bound those of all other columns (``screening``); where too many stay
-   undecided the residual is multiplied with the whole table, for all such problems in one
-   product, and kept; the undecided few are multiplied exactly;
-4. problems whose gap passes are done; in the others the columns that violate their bound
-   join the working set, and the round repeats.
-
-The strong rule only proposes.  The certificate decides.
+``walk`` leads a chunk along its grids; here is what it knows.
 """
 
 from __future__ import annotations
@@ -28,33 +16,16 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from sparsesel.engine import kernels, screening
 from sparsesel.engine.basis import Basis, unpenalised_basis
-from sparsesel.engine.design import DesignMatrix, FloatArray
-from sparsesel.engine.status import Status
+from sparsesel.engine.design import DesignMatrix, FloatArray, IntArray
 
 if TYPE_CHECKING:
-    from sparsesel.engine.bank import Keep, Problems
+    from sparsesel.engine.bank import Problems
     from sparsesel.engine.losses import LogLoss, SquaredError
 
-IntArray = NDArray[np.int64]
 
-# Columns proposed to a working set at once: this part of its support, at least so many.
-_PROPOSED_SHARE = 4
-_FEWEST_PROPOSED = 10
-# A working set is swept of unused columns when they outnumber the used ones by this factor
-# and constant; sweeping moves Gram matrices, so not at every penalty.
-_SLACK_FACTOR, _SLACK = 2, 40
 # Residuals with known gradients that are kept per problem.
 _KEPT = 3
-# More undecided columns than this constant and this share of the table make the product
-# with the whole table the cheaper way.
-_UNDECIDED, _UNDECIDED_SHARE = 64, 16
-# Rounds without a new column in which rounding may be repaired before the problem is
-# declared stalled.
-_REPAIRS = 4
-# Share of the tolerance spent inside the working set; the rest is for the other columns.
-_INSIDE = 0.3
 
 
 class Pool:
@@ -113,6 +84,14 @@ class WorkingSets:
             gradient=np.empty((n_problems, 0)),
         )
 
+    def occupied(self) -> NDArray[np.bool_]:
+        """Which places hold a column (B, capacity)."""
+        return np.arange(self.coef.shape[1]) < self.size[:, None]
+
+    def used(self) -> NDArray[np.bool_]:
+        """Which places hold a column with a nonzero coefficient (B, capacity)."""
+        return (self.coef != 0.0) & self.occupied()
+
     def reserve(self, capacity: int) -> None:
         """Make room for ``capacity`` columns per problem."""
         present = self.coef.shape[1]
@@ -131,11 +110,14 @@ class WorkingSets:
 
 @dataclass
 class Kept:
-    """The latest residuals (B, K, n) whose gradients (B, K, p) are known, K in a ring."""
+    """The latest residuals (B, K, n) whose gradients (B, K, p) are known, K in a ring.
+
+    ``pushed`` (B,) counts all that were ever kept; the newest is at (pushed - 1) % K.
+    """
 
     residual: FloatArray
     gradient: NDArray[np.float32]
-    count: IntArray
+    pushed: IntArray
 
     @classmethod
     def empty(cls, n_problems: int, n_rows: int, n_columns: int) -> Kept:
@@ -148,14 +130,25 @@ class Kept:
 
     def push(self, problems: IntArray, residual: FloatArray, gradient: FloatArray) -> None:
         """Keep these, the oldest of their problem making room."""
-        place = self.count[problems] % _KEPT
+        place = self.pushed[problems] % _KEPT
         self.residual[problems, place] = residual
         self.gradient[problems, place] = gradient
-        self.count[problems] += 1
+        self.pushed[problems] += 1
 
-    def known(self, b: int) -> int:
-        """How many residuals of problem b are kept."""
-        return min(int(self.count[b]), _KEPT)
+
+@dataclass
+class Outside:
+    """Columns outside the working sets, ragged: found[b, :totals[b]] with their gradients."""
+
+    found: IntArray
+    totals: IntArray
+    values: FloatArray
+
+    @classmethod
+    def empty(cls, n_problems: int, capacity: int) -> Outside:
+        """Room for ``capacity`` columns per problem."""
+        shape = (n_problems, capacity)
+        return cls(np.empty(shape, np.int64), np.zeros(n_problems, np.int64), np.empty(shape))
 
 
 @dataclass
@@ -194,11 +187,9 @@ def open_chunk(
 ) -> Chunk:
     """State the chunk's problems in full and start them at their null models."""
     n_problems, n, p = problems.count, design.n_rows, design.n_columns
-    weights = _rows(1.0 if problems.sample_weight is None else problems.sample_weight, n_problems, n)
+    weights = _rows(_one_if_none(problems.sample_weight), n_problems, n)
     weights = np.ascontiguousarray(weights / weights.sum(axis=1, keepdims=True))
-    penalty = _rows(
-        1.0 if problems.penalty_weights is None else problems.penalty_weights, n_problems, p
-    )
+    penalty = _rows(_one_if_none(problems.penalty_weights), n_problems, p)
     moments = design.moments(weights)
     deviation = moments.scale
     norms = deviation if problems.fit_intercept else np.hypot(moments.mean, deviation)
@@ -234,6 +225,10 @@ def open_chunk(
     return chunk
 
 
+def _one_if_none(values: FloatArray | None) -> FloatArray | float:
+    return 1.0 if values is None else values
+
+
 def _rows(values: object, n_problems: int, length: int) -> FloatArray:
     return np.broadcast_to(np.asarray(values, dtype=np.float64), (n_problems, length))
 
@@ -257,201 +252,3 @@ def _alpha_max(gradient: FloatArray, order_one: FloatArray, l1_ratio: float) -> 
         ratios = np.abs(gradient) / order_one
     ratios[np.isinf(order_one)] = 0.0
     return ratios.max(axis=1, initial=0.0) / l1_ratio
-
-
-class Walk:
-    """The walk of a chunk along its grids: what is kept, and who is finished."""
-
-    def __init__(
-        self, chunk: Chunk, loss: SquaredError | LogLoss, alphas: FloatArray, keep: Keep, tol: float
-    ) -> None:
-        self.chunk, self.loss, self.alphas, self.keep, self.tol = chunk, loss, alphas, keep, tol
-        shape = alphas.shape
-        self.gap = np.full(shape, np.nan)
-        self.status = np.full(shape, Status.NOT_REACHED, np.int8)
-        self.n_iter = np.zeros(shape, np.int64)
-        self.intercept = np.full(shape, np.nan)
-        self.answers: list[list[tuple[IntArray, FloatArray]]] = [[] for _ in range(shape[0])]
-        self.held_out = None if keep.held_out is None else np.full(shape, np.nan)
-        self.entries = np.full((shape[0], keep.entries), -1, np.int64)
-        self._entered = [set[int]() for _ in range(shape[0])]
-        # With a null objective of zero every penalised coefficient is zero, provably.
-        self._trivial = chunk.null_objective == 0.0
-        self._finished = np.zeros(shape[0], np.bool_)
-        self._last = np.maximum(chunk.alpha_max, alphas[:, 0])
-        self._found = np.empty(_UNDECIDED + chunk.design.n_columns // _UNDECIDED_SHARE, np.int64)
-
-    def run(self) -> None:
-        """Visit every grid point until all problems are finished."""
-        for k in range(self.alphas.shape[1]):
-            open_ = np.flatnonzero(~self._finished)
-            if not open_.size:
-                return
-            self._visit(k, open_)
-            self._record(k, open_)
-            self._last = self.alphas[:, k]
-
-    def _visit(self, k: int, problems: IntArray) -> None:
-        chunk, alpha = self.chunk, np.ascontiguousarray(self.alphas[:, k])
-        chunk.sweeps[:] = 0
-        self.gap[problems, k] = 0.0
-        self.status[problems, k] = Status.CONVERGED
-        pending = problems[~self._trivial[problems]]
-        self._drop_unused(pending)
-        self._propose(pending, np.maximum(2.0 * alpha - self._last, 0.0))
-        inside = np.full(alpha.size, _INSIDE)
-        repairs = np.zeros(alpha.size, np.int64)
-        while pending.size:
-            self.loss.solve(chunk, pending, alpha, inside * self.tol * chunk.null_objective)
-            violators = self._certify(k, pending, alpha)
-            open_ = pending[~(self.gap[pending, k] <= self.tol)]
-            grown = self._admit(open_, [violators[b] for b in open_])
-            repairs[open_] += ~grown
-            inside[open_[~grown]] *= 0.1
-            spent = chunk.sweeps[open_] >= chunk.max_iter
-            self.status[open_[spent], k] = Status.MAX_ITER
-            stalled = ~spent & (repairs[open_] > _REPAIRS)
-            self.status[open_[stalled], k] = Status.STALLED
-            pending = open_[~spent & ~stalled]
-        self.n_iter[problems, k] = chunk.sweeps[problems]
-
-    def _certify(self, k: int, problems: IntArray, alpha: FloatArray) -> dict[int, IntArray]:
-        """Write the gaps of the named problems; return the columns that violate their bounds."""
-        chunk = self.chunk
-        outside = {b: self._undecided(b, alpha[b]) for b in problems}
-        crowded = np.array([b for b in problems if outside[b] is None], dtype=np.int64)
-        if crowded.size:
-            residual = chunk.residual[crowded]
-            gradient = chunk.design.correlate(chunk.weights[crowded] * residual)
-            chunk.kept.push(crowded, residual, gradient)
-        violators = {}
-        for b in problems:
-            columns = outside[b]
-            if columns is None:
-                columns = self._undecided(b, alpha[b])
-            if columns is None:
-                columns = np.flatnonzero(~chunk.taken[b] & np.isfinite(chunk.order_one[b]))
-            gradient = chunk.design.correlate_columns(
-                chunk.weights[b] * chunk.residual[b], columns
-            )
-            one, two = chunk.order_one[b, columns], chunk.order_two[b, columns]
-            gap = self.loss.certify(chunk, b, alpha[b], (gradient, one, two))
-            self.gap[b, k] = gap
-            if not gap <= self.tol:
-                violators[int(b)] = screening.violating(
-                    columns, gradient, chunk.order_one[b], alpha[b] * chunk.l1_ratio,
-                    self._most_proposed(b),
-                )  # fmt: skip
-        return violators
-
-    def _undecided(self, b: int, alpha: float) -> IntArray | None:
-        """Columns that kept gradients can't bound at this residual; None if too many."""
-        chunk, kept = self.chunk, self.chunk.kept
-        known = kept.known(b)
-        mixing, rest = screening.mix(
-            chunk.weights[b], chunk.residual[b], kept.residual[b], known
-        )
-        total = screening.undecided(
-            kept.gradient[b], known, mixing, rest, chunk.norms[b], chunk.order_one[b],
-            chunk.taken[b], alpha * chunk.l1_ratio, self._found,
-        )  # fmt: skip
-        return None if total < 0 else self._found[:total].copy()
-
-    def _drop_unused(self, problems: IntArray) -> None:
-        work, taken = self.chunk.work, self.chunk.taken
-        used = (work.coef != 0.0) & (np.arange(work.coef.shape[1]) < work.size[:, None])
-        crowded = work.size > _SLACK_FACTOR * used.sum(axis=1) + _SLACK
-        crowded = problems[crowded[problems]]
-        if not crowded.size:
-            return
-        for b in crowded:
-            columns = work.columns[b, : work.size[b]]
-            taken[b, columns[~used[b, : work.size[b]]]] = False
-        kernels.compact(
-            crowded, used, work.size, work.filled, work.columns, work.slots, work.coef,
-            work.order_one, work.order_two, work.gram, work.border, self.loss.keeps_gram,
-        )  # fmt: skip
-
-    def _most_proposed(self, b: int) -> int:
-        work = self.chunk.work
-        used = int(np.count_nonzero(work.coef[b, : work.size[b]]))
-        return max(_FEWEST_PROPOSED, used // _PROPOSED_SHARE)
-
-    def _propose(self, problems: IntArray, threshold: FloatArray) -> None:
-        """Admit columns whose predicted |g| exceeds threshold * rho * v * s."""
-        chunk, kept = self.chunk, self.chunk.kept
-        found = []
-        for b in problems:
-            known = kept.known(b)
-            mixing, _ = screening.mix(
-                chunk.weights[b], chunk.residual[b], kept.residual[b], known
-            )
-            found.append(
-                screening.promising(
-                    kept.gradient[b], known, mixing, chunk.order_one[b], chunk.taken[b],
-                    threshold[b] * chunk.l1_ratio, self._most_proposed(b),
-                )  # fmt: skip
-            )
-        self._admit(problems, found)
-
-    def _admit(self, problems: IntArray, found: list[IntArray]) -> NDArray[np.bool_]:
-        """Put the found columns into the working sets; says which sets grew."""
-        chunk, work = self.chunk, self.chunk.work
-        grown = np.array([part.size > 0 for part in found], dtype=np.bool_)
-        if not grown.any():
-            return grown
-        chunk.pool.ensure(np.concatenate(found))
-        work.reserve(max(work.size[b] + f.size for b, f in zip(problems, found, strict=True)))
-        for b, columns in zip(problems, found, strict=True):
-            place = slice(work.size[b], work.size[b] + columns.size)
-            work.columns[b, place] = columns
-            work.slots[b, place] = chunk.pool.slot_of[columns]
-            work.coef[b, place] = 0.0
-            work.order_one[b, place] = chunk.order_one[b, columns]
-            work.order_two[b, place] = chunk.order_two[b, columns]
-            work.size[b] += columns.size
-            chunk.taken[b, columns] = True
-        self.loss.extend(chunk, problems[grown])
-        return grown
-
-    def _record(self, k: int, problems: IntArray) -> None:
-        if self.held_out is not None:
-            weights = self.keep.held_out[problems]
-            losses = self.loss.row_losses(self.chunk, problems)
-            self.held_out[problems, k] = np.einsum("bn,bn->b", weights, losses) / weights.sum(
-                axis=1
-            )
-        for b in problems:
-            if self.keep.coefficients:
-                self._keep_coefficients(k, b)
-            if self.keep.entries:
-                self._keep_entries(b)
-
-    def _keep_coefficients(self, k: int, b: int) -> None:
-        chunk, work = self.chunk, self.chunk.work
-        m = work.size[b]
-        columns, values = work.columns[b, :m], work.coef[b, :m]
-        used = values != 0.0
-        intercept, unpenalised = chunk.basis.coefficients(b, self.loss.basis_load(chunk, b))
-        columns = np.concatenate([columns[used], chunk.basis.columns[b]])
-        values = np.concatenate([values[used], unpenalised])
-        if chunk.basis.fit_intercept:
-            intercept -= float(values @ chunk.design.centres[columns])
-        order = np.argsort(columns)
-        self.intercept[b, k] = intercept
-        self.answers[b].append((columns[order], values[order]))
-
-    def _keep_entries(self, b: int) -> None:
-        """Append who is newly in: larger standardised |coefficient| first, then position."""
-        work, entered = self.chunk.work, self._entered[b]
-        m = work.size[b]
-        columns, values = work.columns[b, :m], np.abs(work.coef[b, :m])
-        order = np.lexsort((columns, -values * self.chunk.deviation[b, columns]))
-        for position in order[values[order] > 0.0]:
-            unit = int(columns[position])
-            if self.keep.entry_units is not None:
-                unit = int(self.keep.entry_units[unit])
-            if unit not in entered and len(entered) < self.keep.entries:
-                self.entries[b, len(entered)] = unit
-                entered.add(unit)
-        self._finished[b] = len(entered) >= self.keep.entries

@@ -29,6 +29,7 @@ from scipy import sparse
 from sparsesel.engine import screening
 
 FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 
 # Bytes of one block of columns in double: small enough to stay in a second-level cache's
 # neighbourhood, large enough that a matrix product over it runs at full speed.
@@ -66,7 +67,7 @@ class DesignMatrix:
             for start in range(0, self.n_columns, width)
         ]
 
-    def _dense(self, columns: slice | NDArray[np.int64]) -> FloatArray:
+    def _dense(self, columns: slice | IntArray) -> FloatArray:
         """The named columns (n, m) in double."""
         raise NotImplementedError
 
@@ -77,9 +78,20 @@ class DesignMatrix:
             out[:, block] = rows @ self._dense(block)
         return out
 
-    def correlate_columns(self, row: FloatArray, columns: NDArray[np.int64]) -> FloatArray:
-        """``row`` (n,) times the named columns of X: (m,)."""
-        return row @ self._dense(columns)
+    def correlate_found(
+        self,
+        problems: IntArray,
+        weights: FloatArray,
+        residual: FloatArray,
+        found: IntArray,
+        totals: IntArray,
+        values: FloatArray,
+    ) -> None:
+        """Write x_j'W r for the columns found[b, :totals[b]] of every named problem."""
+        for b in problems:
+            count = totals[b]
+            row = weights[b] * residual[b]
+            values[b, :count] = row @ self._dense(found[b, :count])
 
     @cached_property
     def _extremes(self) -> tuple[FloatArray, FloatArray]:
@@ -117,7 +129,7 @@ class DesignMatrix:
             scale[:, block] = np.sqrt(np.maximum(variance, 0.0))
         return Moments(mean, scale)
 
-    def gather(self, columns: NDArray[np.int64], centred: bool) -> FloatArray:
+    def gather(self, columns: IntArray, centred: bool) -> FloatArray:
         """The named columns as rows (m, n), contiguous, in double; less centres or as is."""
         values = self._dense(columns)
         return np.ascontiguousarray((values - self.centres[columns] if centred else values).T)
@@ -140,7 +152,7 @@ def _variance_about_own_mean(weights: FloatArray, values: FloatArray) -> FloatAr
 class DenseDesign(DesignMatrix):
     """A float32 or float64 array in C or F order, a memory map included."""
 
-    def _dense(self, columns: slice | NDArray[np.int64]) -> FloatArray:
+    def _dense(self, columns: slice | IntArray) -> FloatArray:
         return np.asarray(self.table[:, columns], dtype=np.float64)
 
     def correlate(self, rows: FloatArray) -> FloatArray:
@@ -148,31 +160,46 @@ class DenseDesign(DesignMatrix):
             return rows @ self.table
         return super().correlate(rows)
 
-    def correlate_columns(self, row: FloatArray, columns: NDArray[np.int64]) -> FloatArray:
+    def correlate_found(
+        self,
+        problems: IntArray,
+        weights: FloatArray,
+        residual: FloatArray,
+        found: IntArray,
+        totals: IntArray,
+        values: FloatArray,
+    ) -> None:
         if not self.table.flags.f_contiguous:
-            return super().correlate_columns(row, columns)
-        out = np.empty(columns.size)
-        screening.dense_dots(read_only(self.table.T), row, columns, out)
-        return out
+            super().correlate_found(problems, weights, residual, found, totals, values)
+            return
+        screening.dense_dots(
+            problems, read_only(self.table.T), weights, residual, found, totals, values
+        )
 
 
 class SparseDesign(DesignMatrix):
     """A table in compressed sparse columns."""
 
-    def _dense(self, columns: slice | NDArray[np.int64]) -> FloatArray:
+    def _dense(self, columns: slice | IntArray) -> FloatArray:
         return self.table[:, columns].toarray().astype(np.float64, copy=False)
 
     def correlate(self, rows: FloatArray) -> FloatArray:
         return np.ascontiguousarray((self.table.T @ np.ascontiguousarray(rows.T)).T)
 
-    def correlate_columns(self, row: FloatArray, columns: NDArray[np.int64]) -> FloatArray:
-        out = np.empty(columns.size)
+    def correlate_found(
+        self,
+        problems: IntArray,
+        weights: FloatArray,
+        residual: FloatArray,
+        found: IntArray,
+        totals: IntArray,
+        values: FloatArray,
+    ) -> None:
         table = self.table
         screening.sparse_dots(
-            read_only(table.data), read_only(table.indices), read_only(table.indptr), row, columns,
-            out,
+            problems, read_only(table.data), read_only(table.indices), read_only(table.indptr),
+            weights, residual, found, totals, values,
         )  # fmt: skip
-        return out
 
 
 def as_design(X: Any) -> DesignMatrix:

@@ -97,9 +97,7 @@ def extend_gram(weights, basis, pool, slots, start, stop, gram, border):
 def extend_many(problems, weights, basis, pool, slots, filled, size, gram, border):
     """``extend_gram`` for the named problems of a chunk, from filled[b] to size[b]."""
     for b in problems:
-        extend_gram(
-            weights[b], basis[b], pool, slots[b], filled[b], size[b], gram[b], border[b]
-        )
+        extend_gram(weights[b], basis[b], pool, slots[b], filled[b], size[b], gram[b], border[b])
         filled[b] = size[b]
 
 
@@ -130,6 +128,50 @@ def compact(
             kept += 1
         size[b] = kept
         filled[b] = kept
+
+
+@kernel
+def admit(
+    problems, found, totals, slot_of, all_one, all_two, taken, size, columns, slots, coef,
+    order_one, order_two,
+):  # fmt: skip
+    """Append the found columns of each named problem to its working set, at zero."""
+    for b in problems:
+        for position in range(totals[b]):
+            j = found[b, position]
+            place = size[b]
+            columns[b, place] = j
+            slots[b, place] = slot_of[j]
+            coef[b, place] = 0.0
+            order_one[b, place] = all_one[b, j]
+            order_two[b, place] = all_two[b, j]
+            taken[b, j] = True
+            size[b] += 1
+
+
+@kernel
+def enter(problems, size, columns, coef, deviation, unit_of, seen, entries, entered):
+    """Append the units that are newly in: larger standardised |coefficient| first.
+
+    Equal ones come in the order of their columns.
+    """
+    for b in problems:
+        while entered[b] < entries.shape[1]:
+            best = -1
+            largest = -1.0
+            for k in range(size[b]):
+                j = columns[b, k]
+                if coef[b, k] == 0.0 or seen[b, unit_of[j]]:
+                    continue
+                value = abs(coef[b, k]) * deviation[b, j]
+                if value > largest or (value == largest and j < best):
+                    largest = value
+                    best = j
+            if best < 0:
+                break
+            seen[b, unit_of[best]] = True
+            entries[b, entered[b]] = unit_of[best]
+            entered[b] += 1
 
 
 @kernel
@@ -290,9 +332,7 @@ def descend(size, gram, gradient, coef, l1, l2, squared_norm, target, max_sweeps
         if cycle > _CYCLES_BEFORE_NEWTON:
             if factor.shape[0] == 0:
                 factor = np.empty((size, size))
-            change = _support_newton(
-                size, gram, gradient, coef, l1, l2, chosen, factor, step
-            )
+            change = _support_newton(size, gram, gradient, coef, l1, l2, chosen, factor, step)
             squared_norm = max(squared_norm + change, 0.0)
             continue
         count = _support(size, coef, chosen)
@@ -585,16 +625,12 @@ def solve_log(
             polish_basis(w, signs[b], basis[b], load[b], predictor[b], psi, curvature)
             for k in range(m):
                 gradient[k] = weighted_dot(w, pool[slots[b, k]], psi)
-            gap = _log_gap(
-                w, signs[b], offset, predictor[b], psi, m, gradient, coef[b], l1, l2
-            )
+            gap = _log_gap(w, signs[b], offset, predictor[b], psi, m, gradient, coef[b], l1, l2)
             stalled = 0 if gap < 0.9 * last else stalled + 1
             if gap <= target[b] or sweeps[b] >= budget or stalled > 10:
                 break
             last = min(gap, last)
-            _curved_gram(
-                w, curvature, basis[b], pool, slots[b], m, model, cross, projected
-            )
+            _curved_gram(w, curvature, basis[b], pool, slots[b], m, model, cross, projected)
             squared_norm = 0.0
             for i in range(n_rows):
                 squared_norm += w[i] * psi[i] * psi[i] / curvature[i]

@@ -19,7 +19,7 @@ from sparsesel.engine import certificate, kernels
 from sparsesel.engine.design import FloatArray
 
 if TYPE_CHECKING:
-    from sparsesel.engine.chunk import Chunk
+    from sparsesel.engine.chunk import Chunk, Outside
 
 # A null objective below this share of the response's mean square is rounding error.
 _NOTHING_LEFT = 1e-24
@@ -28,8 +28,6 @@ _NOTHING_LEFT = 1e-24
 _SEPARATED = 1e-8
 
 Problems = NDArray[np.int64]
-#: Exact gradients outside the working set with their first- and second-order penalties.
-Outside = tuple[FloatArray, FloatArray, FloatArray]
 
 
 class SquaredError:
@@ -76,19 +74,24 @@ class SquaredError:
             chunk.residual, chunk.sweeps,
         )  # fmt: skip
 
-    def certify(self, chunk: Chunk, b: int, alpha: float, outside: Outside) -> float:
-        """Relative gap of problem b."""
+    def certify(
+        self, chunk: Chunk, problems: Problems, alpha: FloatArray, outside: Outside
+    ) -> FloatArray:
+        """Relative gaps (B,), written for the named problems."""
         work = chunk.work
-        return certificate.certify_squared(
-            alpha, chunk.l1_ratio, chunk.null_objective[b], chunk.weights[b], chunk.residual[b],
-            chunk.centred[b], work.size[b], work.gradient[b], work.order_one[b],
-            work.order_two[b], work.coef[b], *outside,
+        gap = np.full(alpha.size, np.nan)
+        certificate.certify_squared(
+            problems, alpha, chunk.l1_ratio, chunk.null_objective, chunk.weights, chunk.residual,
+            chunk.centred, work.size, work.gradient, work.order_one, work.order_two, work.coef,
+            outside.found, outside.totals, outside.values, chunk.order_one, chunk.order_two, gap,
         )  # fmt: skip
+        return gap
 
-    def basis_load(self, chunk: Chunk, b: int) -> FloatArray:
-        """Coordinates of problem b on its basis."""
-        m = chunk.work.size[b]
-        return chunk.load[b] - chunk.work.coef[b, :m] @ chunk.work.border[b, :m]
+    def basis_loads(self, chunk: Chunk) -> FloatArray:
+        """Coordinates of every problem on its basis (B, k)."""
+        work = chunk.work
+        coef = np.where(work.occupied(), work.coef, 0.0)
+        return chunk.load - np.einsum("bm,bmk->bk", coef, work.border)
 
     def row_losses(self, chunk: Chunk, problems: Problems) -> FloatArray:
         """The loss of every row, those of weight zero too: (problems.size, n)."""
@@ -143,9 +146,7 @@ class LogLoss:
                     "weights, and that every fold or half holds both classes."
                 )
 
-    def _refuse_separation(
-        self, chunk: Chunk, b: int, curvature: FloatArray, score: float
-    ) -> None:
+    def _refuse_separation(self, chunk: Chunk, b: int, curvature: FloatArray, score: float) -> None:
         used = chunk.basis.back[b].shape[1]
         if used == 0:
             return
@@ -175,18 +176,23 @@ class LogLoss:
             chunk.predictor, chunk.residual, chunk.sweeps,
         )  # fmt: skip
 
-    def certify(self, chunk: Chunk, b: int, alpha: float, outside: Outside) -> float:
-        """Relative gap of problem b."""
+    def certify(
+        self, chunk: Chunk, problems: Problems, alpha: FloatArray, outside: Outside
+    ) -> FloatArray:
+        """Relative gaps (B,), written for the named problems."""
         work = chunk.work
-        return certificate.certify_log(
-            alpha, chunk.l1_ratio, chunk.null_objective[b], chunk.weights[b], chunk.residual[b],
-            chunk.signs[b], chunk.predictor[b], chunk.offset, work.size[b], work.gradient[b],
-            work.order_one[b], work.order_two[b], work.coef[b], *outside,
+        gap = np.full(alpha.size, np.nan)
+        certificate.certify_log(
+            problems, alpha, chunk.l1_ratio, chunk.null_objective, chunk.weights, chunk.residual,
+            chunk.signs, chunk.predictor, chunk.offset, work.size, work.gradient, work.order_one,
+            work.order_two, work.coef, outside.found, outside.totals, outside.values,
+            chunk.order_one, chunk.order_two, gap,
         )  # fmt: skip
+        return gap
 
-    def basis_load(self, chunk: Chunk, b: int) -> FloatArray:
-        """Coordinates of problem b on its basis."""
-        return chunk.load[b]
+    def basis_loads(self, chunk: Chunk) -> FloatArray:
+        """Coordinates of every problem on its basis (B, k)."""
+        return chunk.load
 
     def row_losses(self, chunk: Chunk, problems: Problems) -> FloatArray:
         """The loss of every row, those of weight zero too: (problems.size, n)."""

@@ -188,15 +188,15 @@ def _check_options(loss: str, l1_ratio: float, tol: float, max_iter: int) -> Non
 
 
 def _numbers(values: ArrayLike, name: str, length: int) -> FloatArray:
-    values = column_or_1d(
+    checked: FloatArray = column_or_1d(
         check_array(values, ensure_2d=False, dtype=np.float64, input_name=name), warn=False
     )
-    if values.size != length:
+    if checked.size != length:
         raise ValueError(
-            f"{name} has {values.size} values and X has {length} rows; they must match. Pass one "
+            f"{name} has {checked.size} values and X has {length} rows; they must match. Pass one "
             f"value of {name} per row of X."
         )
-    return values
+    return checked
 
 
 def _weights(sample_weight: ArrayLike | None, length: int) -> FloatArray | None:

@@ -22,7 +22,8 @@ import numpy as np
 
 from sparsesel.engine._jit import exact_kernel, kernel
 
-# A unit in the last place of single precision; and the share of the limit given to double-precision sums over rows.
+# A unit in the last place of single precision; and the share of the limit given to
+# double-precision sums over rows.
 _SINGLE = 1.2e-7
 _DOUBLE = 1e-10
 # Lift of the normal equations: kept residuals are nearly parallel late in a path.
@@ -32,40 +33,37 @@ _STRIP = 256
 
 
 @kernel
-def mix(weights, residual, kept, count):
-    """Coefficients a (count,) of the residual on the kept ones, and ||d||_W.
+def _mix(weights, residual, kept, known, newest, coefficients):
+    """Write the coefficients a of the residual on the kept ones; returns ||d||_W.
 
     The norm carries the rounding of the kept gradients, |G_kj| <= ||x_j||_W ||r_k||_W.
     """
-    size = weights.size
-    coefficients = np.zeros(count)
-    normal = np.zeros((count, count))
-    diagonal = np.zeros(count)
-    for k in range(count):
+    normal = np.zeros((known, known))
+    diagonal = np.zeros(known)
+    for k in range(known):
         for c in range(k + 1):
             total = 0.0
-            for i in range(size):
+            for i in range(weights.size):
                 total += weights[i] * kept[k, i] * kept[c, i]
             normal[k, c] = total
         diagonal[k] = normal[k, k]
         total = 0.0
-        for i in range(size):
+        for i in range(weights.size):
             total += weights[i] * kept[k, i] * residual[i]
         coefficients[k] = total
-    usable = _solve_in_place(normal, coefficients)
-    if not usable:
+    if not _solve_in_place(normal, coefficients):
         coefficients[:] = 0.0
-        coefficients[0] = 1.0
+        coefficients[newest] = 1.0
     rest = 0.0
-    for i in range(size):
+    for i in range(weights.size):
         gap = residual[i]
-        for k in range(count):
+        for k in range(known):
             gap -= coefficients[k] * kept[k, i]
         rest += weights[i] * gap * gap
     rounding = 0.0
-    for k in range(count):
+    for k in range(known):
         rounding += abs(coefficients[k]) * np.sqrt(diagonal[k])
-    return coefficients, np.sqrt(rest) + _SINGLE * rounding
+    return np.sqrt(rest) + _SINGLE * rounding
 
 
 @kernel
@@ -97,13 +95,13 @@ def _solve_in_place(normal, right):
 
 
 @exact_kernel
-def _predict(gradients, count, coefficients, start, stop, value):
+def _predict(gradients, coefficients, start, stop, value):
     """|sum_k a_k G_kj| of a strip of columns."""
     # Slices, because an index that is a sum keeps the loop from being vectorised.
     row = gradients[0, start:stop]
     for c in range(row.size):
         value[c] = coefficients[0] * row[c]
-    for k in range(1, count):
+    for k in range(1, coefficients.size):
         row = gradients[k, start:stop]
         for c in range(row.size):
             value[c] += coefficients[k] * row[c]
@@ -112,18 +110,14 @@ def _predict(gradients, count, coefficients, start, stop, value):
 
 
 @exact_kernel
-def undecided(gradients, count, coefficients, rest, norms, order_one, taken, limit, found):
-    """Columns outside the working set whose bound does not stay under ``limit`` * l1.
-
-    Writes them to ``found`` in column order, as many as it holds, and returns their number,
-    or -1 if there are more.
-    """
+def _undecided(gradients, coefficients, rest, norms, order_one, taken, limit, found):
+    """Columns outside the working set whose bound does not stay under ``limit`` * l1."""
     total = 0
     value = np.empty(_STRIP)
     lowered = limit * (1.0 - _DOUBLE)
     for start in range(0, order_one.size, _STRIP):
         stop = min(start + _STRIP, order_one.size)
-        _predict(gradients, count, coefficients, start, stop, value)
+        _predict(gradients, coefficients, start, stop, value)
         norm, one, busy = norms[start:stop], order_one[start:stop], taken[start:stop]
         hits = 0
         for c in range(norm.size):
@@ -141,15 +135,35 @@ def undecided(gradients, count, coefficients, rest, norms, order_one, taken, lim
 
 
 @exact_kernel
-def promising(gradients, count, coefficients, order_one, taken, threshold, limit):
-    """Columns whose predicted |g| exceeds threshold * l1: the ``limit`` largest by ratio."""
-    found = np.empty(order_one.size, np.int64)
-    ratios = np.empty(order_one.size)
+def undecided(
+    problems, weights, residual, kept_residual, kept_gradient, pushed, norms, order_one, taken,
+    limit, found, totals,
+):  # fmt: skip
+    """Columns of each named problem that kept gradients can't bound under limit[b] * l1.
+
+    Row b of ``found`` receives them in column order and ``totals[b]`` their number, -1 if
+    there are more than fit.
+    """
+    for b in problems:
+        known = min(pushed[b], kept_residual.shape[1])
+        mixing = np.empty(known)
+        newest = (pushed[b] - 1) % kept_residual.shape[1]
+        rest = _mix(weights[b], residual[b], kept_residual[b], known, newest, mixing)
+        totals[b] = _undecided(
+            kept_gradient[b], mixing, rest, norms[b], order_one[b], taken[b], limit[b], found[b]
+        )
+
+
+@exact_kernel
+def _promising(gradients, coefficients, order_one, taken, threshold, most, found):
+    size = order_one.size
+    named = np.empty(size, np.int64)
+    ratios = np.empty(size)
     total = 0
     value = np.empty(_STRIP)
-    for start in range(0, order_one.size, _STRIP):
-        stop = min(start + _STRIP, order_one.size)
-        _predict(gradients, count, coefficients, start, stop, value)
+    for start in range(0, size, _STRIP):
+        stop = min(start + _STRIP, size)
+        _predict(gradients, coefficients, start, stop, value)
         one, busy = order_one[start:stop], taken[start:stop]
         hits = 0
         for c in range(one.size):
@@ -158,59 +172,85 @@ def promising(gradients, count, coefficients, order_one, taken, threshold, limit
             continue
         for c in range(one.size):
             if value[c] > threshold * one[c] and not busy[c]:
-                found[total] = start + c
+                named[total] = start + c
                 ratios[total] = value[c] / one[c]
                 total += 1
-    return _largest(found[:total], ratios[:total], limit)
+    return _largest(named[:total], ratios[:total], most, found)
 
 
 @exact_kernel
-def violating(columns, gradient, order_one, limit_factor, limit):
-    """Of the exactly known columns those over limit_factor * l1, the ``limit`` largest."""
-    found = np.empty(columns.size, np.int64)
-    ratios = np.empty(columns.size)
-    total = 0
-    for position in range(columns.size):
-        j = columns[position]
-        if not abs(gradient[position]) <= limit_factor * order_one[j]:
-            found[total] = j
-            ratios[total] = abs(gradient[position]) / order_one[j]
-            total += 1
-    return _largest(found[:total], ratios[:total], limit)
+def promising(
+    problems, weights, residual, kept_residual, kept_gradient, pushed, order_one, taken, threshold,
+    most, found, totals,
+):  # fmt: skip
+    """Columns whose predicted |g| exceeds threshold[b] * l1: the most[b] largest by ratio."""
+    for b in problems:
+        known = min(pushed[b], kept_residual.shape[1])
+        mixing = np.empty(known)
+        newest = (pushed[b] - 1) % kept_residual.shape[1]
+        _mix(weights[b], residual[b], kept_residual[b], known, newest, mixing)
+        totals[b] = _promising(
+            kept_gradient[b], mixing, order_one[b], taken[b], threshold[b], most[b], found[b]
+        )
 
 
 @exact_kernel
-def _largest(found, ratios, limit):
-    """The ``limit`` columns of largest ratio, in column order; a NaN counts as large."""
-    if found.size <= limit:
-        return found.copy()
-    cut = np.partition(ratios, found.size - limit)[found.size - limit]
-    kept = np.empty(limit, np.int64)
+def violating(problems, order_one, limit, most, found, totals, values):
+    """Keep, of the exactly known columns, those over limit[b] * l1, the most[b] largest."""
+    for b in problems:
+        named = np.empty(totals[b], np.int64)
+        ratios = np.empty(totals[b])
+        count = 0
+        for position in range(totals[b]):
+            j = found[b, position]
+            if not abs(values[b, position]) <= limit[b] * order_one[b, j]:
+                named[count] = j
+                ratios[count] = abs(values[b, position]) / order_one[b, j]
+                count += 1
+        totals[b] = _largest(named[:count], ratios[:count], most[b], found[b])
+
+
+@exact_kernel
+def _largest(named, ratios, most, found):
+    """Write the columns of largest ratio to ``found``, in column order; a NaN is large."""
+    most = min(most, found.size)
+    if named.size <= most:
+        found[: named.size] = named
+        return named.size
+    cut = np.partition(ratios, named.size - most)[named.size - most]
     total = 0
-    for position in range(found.size):
-        if not ratios[position] < cut and total < limit:
-            kept[total] = found[position]
+    for position in range(named.size):
+        if not ratios[position] < cut and total < most:
+            found[total] = named[position]
             total += 1
-    return kept[:total]
+    return total
 
 
 @kernel
-def dense_dots(table, weighted, columns, out):
-    """Products of a row vector with some rows of ``table`` (p, n), in double."""
-    for position in range(columns.size):
-        j = columns[position]
-        total = 0.0
+def dense_dots(problems, table, weights, residual, found, totals, values):
+    """Products of W r with the found rows of ``table`` (p, n), in double."""
+    weighted = np.empty(weights.shape[1])
+    for b in problems:
         for i in range(weighted.size):
-            total += weighted[i] * table[j, i]
-        out[position] = total
+            weighted[i] = weights[b, i] * residual[b, i]
+        for position in range(totals[b]):
+            column = table[found[b, position]]
+            total = 0.0
+            for i in range(weighted.size):
+                total += weighted[i] * column[i]
+            values[b, position] = total
 
 
 @kernel
-def sparse_dots(data, indices, indptr, weighted, columns, out):
+def sparse_dots(problems, data, indices, indptr, weights, residual, found, totals, values):
     """The same for the columns of a CSC table."""
-    for position in range(columns.size):
-        j = columns[position]
-        total = 0.0
-        for place in range(indptr[j], indptr[j + 1]):
-            total += data[place] * weighted[indices[place]]
-        out[position] = total
+    weighted = np.empty(weights.shape[1])
+    for b in problems:
+        for i in range(weighted.size):
+            weighted[i] = weights[b, i] * residual[b, i]
+        for position in range(totals[b]):
+            j = found[b, position]
+            total = 0.0
+            for place in range(indptr[j], indptr[j + 1]):
+                total += data[place] * weighted[indices[place]]
+            values[b, position] = total
