@@ -25,7 +25,7 @@ from sklearn.utils.validation import check_array, check_is_fitted, validate_data
 
 from sparsesel._sklearn_compat import HasMethods, StrOptions, configured_container
 from sparsesel.claim import Claim
-from sparsesel.engine import Problems
+from sparsesel.engine import ENGINE_FORMAT, Problems
 from sparsesel.selectors._columns import Columns, Table, resolve_columns
 from sparsesel.tasks import TaskSettings, draw_seed, fingerprint
 
@@ -274,7 +274,7 @@ class BaseSparseSelector(SelectorMixin, BaseEstimator):
             name = fingerprint(
                 type(self).__name__,
                 (data.X, data.response, data.weights, data.groups, data.columns, data.seed),
-                (data.loss, self.standardize, *parts),
+                (data.loss, self.standardize, ENGINE_FORMAT, *parts),
             )
         return TaskSettings(
             n_jobs=self.n_jobs,
