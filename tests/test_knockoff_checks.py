@@ -6,8 +6,9 @@ from dataclasses import dataclass
 
 import numpy as np
 import pytest
+from scipy.stats import norm, poisson
 
-from sparsesel.knockoffs import GaussianModel, check_exchangeability
+from sparsesel.knockoffs import CopulaModel, GaussianModel, check_exchangeability
 from sparsesel.knockoffs._model import pair
 from sparsesel.tasks import spawn
 
@@ -62,6 +63,18 @@ CORRECT = {
     "Ledoit-Wolf .9": (GaussianModel(), 0.9),
     "Ledoit-Wolf 0": (GaussianModel(), 0.0),
 }
+
+
+def two_valued_rows(generator, n_rows, n_features, correlation):
+    return (gaussian_rows(generator, n_rows, n_features, correlation) > 0.5).astype(float)
+
+
+def count_rows(generator, n_rows, n_features, correlation):
+    latent = gaussian_rows(generator, n_rows, n_features, correlation)
+    return poisson.ppf(norm.cdf(latent), 2.0)
+
+
+COPULA = {"lognormal": lognormal_rows, "two-valued": two_valued_rows, "counts": count_rows}
 WRONG = {
     "no dependence under .6": (gaussian_rows, GaussianModel(np.eye(50))),
     "permuted columns": (gaussian_rows, Permuted()),
@@ -83,6 +96,20 @@ def test_gross_misfits_are_found(name):
     """At a rate of .9, fewer than 5 of 10 have probability below .0002."""
     rows, model = WRONG[name]
     assert alarms(rows, model, 1000, 50, 0.6, 10, 62) >= 5
+
+
+@pytest.mark.parametrize("name", COPULA)
+def test_copula_is_accepted_where_it_holds(name):
+    """At a rate of .07, more than 4 of 10 alarms have probability below .001."""
+    assert alarms(COPULA[name], CopulaModel(), 1000, 20, 0.6, 10, 70) <= 4
+
+
+@pytest.mark.statistical
+@pytest.mark.parametrize("name", COPULA)
+def test_false_alarm_rate_of_the_copula(name):
+    """At most 7%, 3 standard errors of 200 repetitions."""
+    found = alarms(COPULA[name], CopulaModel(), 1000, 20, 0.6, 200, 71)
+    assert found / 200 <= 0.07 + 3.0 * np.sqrt(0.07 * 0.93 / 200)
 
 
 @pytest.mark.statistical

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from sparsesel.knockoffs._model import PairedTable
+from sparsesel.knockoffs.copula import CopulaModel, FittedCopula
 from sparsesel.knockoffs.exchangeability import ExchangeabilityCheck, check_exchangeability
 from sparsesel.knockoffs.fixed_x import FittedFixedX, FixedXModel
 from sparsesel.knockoffs.gaussian import FittedGaussian, GaussianModel
@@ -18,7 +19,9 @@ from sparsesel.knockoffs.s_vectors import (
 
 __all__ = [
     "S_VECTOR_METHODS",
+    "CopulaModel",
     "ExchangeabilityCheck",
+    "FittedCopula",
     "FittedFixedX",
     "FittedGaussian",
     "FixedXModel",

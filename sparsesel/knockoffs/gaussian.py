@@ -18,6 +18,7 @@ import numpy as np
 
 from sparsesel.knockoffs._gaussian_draws import DenseDraws, LowRankDraws, safe_root
 from sparsesel.knockoffs._model import (
+    FEW_VALUES,
     HOLDS,
     UNCHECKED,
     VIOLATED,
@@ -27,9 +28,10 @@ from sparsesel.knockoffs._model import (
     as_covariates,
     as_weights,
     condition,
+    count_few_valued,
     pair,
 )
-from sparsesel.knockoffs.covariances import ESTIMATORS, Covariance, scaled, subset, variances
+from sparsesel.knockoffs.covariances import Covariance, estimator, scaled, subset, variances
 from sparsesel.knockoffs.low_rank import LowRankCovariance, capacitance
 from sparsesel.knockoffs.s_vectors import (
     SVector,
@@ -123,7 +125,9 @@ LowRankCovariance, default="ledoit_wolf"
             conditioning, covariance = _estimated(self.covariance, X, Z, weights)
         else:
             conditioning, covariance = self._given(X, Z, weights)
-        return _fitted(self, conditioning, covariance, int((weights > 0).sum()))
+        fitted = fitted_gaussian(self, conditioning, covariance, int((weights > 0).sum()))
+        few = count_few_valued(X[weights > 0], np.flatnonzero(fitted.has_copy))
+        return replace(fitted, n_few_valued=few)
 
     def _given(
         self, X: np.ndarray, Z: np.ndarray, weights: np.ndarray
@@ -151,7 +155,7 @@ LowRankCovariance, default="ledoit_wolf"
         coefficients = np.vstack([intercept, slopes])[:, has_copy]
         scale = np.ones(int(has_copy.sum()))
         conditioning = Conditioning(has_copy, np.empty(0, dtype=np.intp), coefficients, scale)
-        return _standardized(conditioning, subset(covariance, has_copy))
+        return standardized(conditioning, subset(covariance, has_copy))
 
 
 @dataclass(frozen=True)
@@ -166,6 +170,8 @@ class FittedGaussian:
         Which features have a copy of their own.
     solution : SVector
         The s-vector of the copied features with its certified gap and shrinkage.
+    n_few_valued : int
+        Copied features that take at most ten values.
     """
 
     settings: GaussianModel
@@ -173,8 +179,9 @@ class FittedGaussian:
     has_copy: np.ndarray
     solution: SVector
     n_rows: int
-    _conditioning: Conditioning
+    conditioning: Conditioning
     _draws: DenseDraws | LowRankDraws | None
+    n_few_valued: int = 0
 
     def sample(
         self,
@@ -203,9 +210,9 @@ class FittedGaussian:
         copies = np.array(X, dtype=kind)
         if self._draws is not None:
             Z = as_covariates(covariates, len(X))
-            drawn = self._draws.draw(self._conditioning.residuals(X, Z), generator)
-            centre = self._conditioning.centre(X, Z)
-            copies[:, self.has_copy] = centre + drawn * self._conditioning.scale
+            drawn = self._draws.draw(self.conditioning.residuals(X, Z), generator)
+            centre = self.conditioning.centre(X, Z)
+            copies[:, self.has_copy] = centre + drawn * self.conditioning.scale
         return copies
 
     def draw(
@@ -224,10 +231,12 @@ class FittedGaussian:
     def assumptions(self) -> Assumptions:
         """What the model assumes: (statement, state, detail) each."""
         size = int(self.has_copy.sum())
+        few = self.n_few_valued
+        notes = [f"{few} take at most {FEW_VALUES} values, CopulaModel is for these"] if few else []
         gaussian = (
             "the features are jointly Gaussian given the covariates",
-            UNCHECKED,
-            "; ".join(self._conditioning.notes),
+            VIOLATED if few else UNCHECKED,
+            "; ".join([*notes, *self.conditioning.notes]),
         )
         if not isinstance(self.settings.covariance, str):
             known = ("the covariance given is that of the features", UNCHECKED, "")
@@ -248,19 +257,14 @@ def _estimated(
     estimate: str, X: np.ndarray, Z: np.ndarray, weights: np.ndarray
 ) -> tuple[Conditioning, Covariance]:
     """Conditioning and correlation matrix from the rows of positive weight."""
-    if estimate not in ESTIMATORS:
-        raise ValueError(
-            f"The covariance estimate {estimate!r} is unknown; allowed are "
-            f"{', '.join(map(repr, ESTIMATORS))}, or a covariance matrix. 'ledoit_wolf' suits "
-            "most tables."
-        )
+    covariance_of = estimator(estimate)
     conditioning = condition(X, Z, weights)
     if not conditioning.has_copy.any():
         return conditioning, np.empty((0, 0))
     seen = weights > 0
     root = np.sqrt(weights[seen] * seen.sum())[:, None]
     rows = conditioning.residuals(X[seen], Z[seen]) * root
-    return _standardized(conditioning, ESTIMATORS[estimate](rows))
+    return standardized(conditioning, covariance_of(rows))
 
 
 def _nearly_singular(solution: SVector) -> Assumptions:
@@ -276,7 +280,7 @@ def _nearly_singular(solution: SVector) -> Assumptions:
     )
 
 
-def _fitted(
+def fitted_gaussian(
     settings: GaussianModel, conditioning: Conditioning, covariance: Covariance, n_rows: int
 ) -> FittedGaussian:
     """Find the s-vector and prepare the draws; the covariance has unit diagonal."""
@@ -302,7 +306,7 @@ def _solution(covariance: Covariance, method: str) -> SVector:
     return SVector(s, method, np.inf, 0, SVectorStatus.IN_BLOCKS, 0.0)
 
 
-def _standardized(
+def standardized(
     conditioning: Conditioning, covariance: Covariance
 ) -> tuple[Conditioning, Covariance]:
     """Move what is left of the variances from the covariance into the scale."""
