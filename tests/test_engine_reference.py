@@ -510,6 +510,51 @@ class TestBank:
             solve_bank(as_design(X), problems, 3)
 
 
+class TestWideTables:
+    """Many columns, where most are never multiplied: the oracle multiplies them all."""
+
+    N, P, L = 70, 1500, 15
+
+    def table(self, rng, storage):
+        X = rng.standard_normal((self.N, self.P)) + 0.5 * rng.standard_normal((self.N, 1))
+        for j in range(1, self.P):  # neighbours correlate, in blocks of 25
+            X[:, j] += 0.9 * X[:, j - 1] * (j % 25 > 0)
+        X *= 10.0 ** rng.uniform(-1, 1, self.P)
+        if storage == "sparse":
+            X *= rng.random(X.shape) < 0.1
+            return sp.csc_array(X)
+        return (X + rng.uniform(-5, 5, self.P)).astype(storage)
+
+    @pytest.mark.parametrize("standardize", [False, True])
+    @pytest.mark.parametrize("storage", STORAGE)
+    @pytest.mark.parametrize(("loss", "l1_ratio"), LOSS_AND_RATIO)
+    def test_every_gap_of_a_bank_is_true(self, loss, l1_ratio, storage, standardize):
+        rng = np.random.default_rng(
+            [13, LOSSES.index(loss), STORAGE.index(storage), int(10 * l1_ratio), standardize]
+        )
+        X = self.table(rng, storage)
+        signal = X[:, :40:10].toarray() if storage == "sparse" else X[:, :40:10]
+        y = (signal / np.abs(signal).max(axis=0)).sum(axis=1)
+        y = (y - y.mean()) / y.std() + 0.5 * rng.standard_normal(self.N)
+        y = y if loss == "squared_error" else (y > 0).astype(float)
+        weights = rng.uniform(0.5, 2, (3, self.N)) * (rng.random((3, self.N)) < 0.8)
+        penalty = rng.uniform(0.5, 2, (3, self.P))
+        penalty[:, ::97], penalty[1, 11] = np.inf, 0.0
+        problems = Problems(
+            loss, y, sample_weight=weights, penalty_weights=penalty, l1_ratio=l1_ratio,
+            standardize=standardize,
+        )  # fmt: skip
+        bank = solve_bank(as_design(X), problems, self.L, alpha_min_ratio=0.02, tol=1e-8)
+        assert np.all(bank.status == Status.CONVERGED)
+        for b in range(3):
+            one = Problem(X, y, loss, l1_ratio, penalty[b], weights[b], standardize=standardize)
+            np.testing.assert_allclose(bank.alpha_max[b], largest_alpha(one), rtol=1e-9)
+            for k, alpha in enumerate(bank.alphas[b]):
+                coef = bank.coef[b][[k]].toarray()[0]
+                gap = certified_gap(one, coef, bank.intercept[b, k], alpha)
+                assert gap <= (1e-8 + 1e-12) * bank.null_objective[b]
+
+
 class TestCertificate:
     """NaN and infinity must fail whatever part of an answer they are in."""
 
