@@ -482,7 +482,7 @@ def test_effective_rows():
 
 @pytest.mark.parametrize(
     ("repetitions", "n_alphas"),
-    [(60, 60), pytest.param(1000, 400, marks=pytest.mark.statistical)],
+    [(60, 60), pytest.param(400, 300, marks=pytest.mark.statistical)],
 )
 @pytest.mark.parametrize(
     ("n", "sigma", "shares"),

@@ -100,7 +100,6 @@ def common_checks():
 
 @pytest.mark.filterwarnings("ignore:y has .* distinct whole numbers:UserWarning")
 @pytest.mark.filterwarnings("ignore:No features were selected:UserWarning")
-@pytest.mark.filterwarnings("ignore::sklearn.exceptions.ConvergenceWarning")
 @common_checks()
 def test_common_check(estimator, check):
     check(estimator)

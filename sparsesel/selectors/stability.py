@@ -232,7 +232,7 @@ class _HalfSampleSelector(BaseSparseSelector):
     def _vote(self, data: FitInput, halves: NDArray[np.bool_], q: int) -> _Votes:
         """Let every half pick its first q units, by the engine."""
         bank = _EntryBank.of(self, data, halves)
-        result = bank.solve(Keep(entries=q, entry_units=data.columns.unit_of), q)
+        result = bank.solve(Keep(entries=q, entry_units=data.columns.unit_of))
         assert result.entry_order is not None
         return _Votes(result.entry_order, int(result.n_iter.max()))
 
@@ -291,7 +291,7 @@ class _HalfSampleSelector(BaseSparseSelector):
         bank = _EntryBank.of(self, data, halves)
         q = self.features_per_fit_
         keep = Keep(coefficients=True, entries=q, entry_units=data.columns.unit_of)
-        result = bank.solve(keep, q)
+        result = bank.solve(keep)
         assert result.entry_order is not None and result.coef is not None
         if not np.array_equal(result.entry_order, self._picks):
             raise ValueError(
@@ -340,8 +340,8 @@ class _EntryBank:
             standardize=self.selector.standardize,
         )
 
-    def solve(self, keep: Keep, q: int) -> BankResult:
-        """The paths of all halves, each until q units have entered."""
+    def solve(self, keep: Keep) -> BankResult:
+        """The paths of all halves, each until as many units have entered as are kept."""
         selector = self.selector
         problems = self.problems()
         settings = selector._settings(
