@@ -1,4 +1,4 @@
-"""`cross_check`: honest fits pass, falsified ones and other data do not; its gap is the oracle's."""
+"""`cross_check`: honest fits pass, falsified ones and other data do not; gaps equal the oracle's."""
 
 from __future__ import annotations
 
