@@ -14,6 +14,7 @@ from sparsesel.knockoffs import (
     GaussianModel,
     LowRankCovariance,
     s_vector,
+    solve_s_vector,
 )
 from sparsesel.knockoffs._gaussian_draws import DenseDraws, LowRankDraws, safe_root
 from sparsesel.knockoffs._marginals import marginal
@@ -334,6 +335,66 @@ def test_two_valued_columns_are_not_called_gaussian():
     X[:, 2] = X[:, 2] > 0
     _, state, detail = GaussianModel().fit(X).assumptions()[0]
     assert state == "checked and violated" and "1 take at most 10 values" in detail
+
+
+# --- groups -----------------------------------------------------------------------------------
+
+
+def paired_features(generator, n_rows):
+    """Six features in three groups of two, the second a noisy repetition of the first."""
+    first = table(generator, n_rows, 3, 0.5)
+    second = first + 0.05 * generator.standard_normal((n_rows, 3))
+    return np.stack([first, second], axis=2).reshape(n_rows, 6), np.arange(6) // 2
+
+
+@pytest.mark.parametrize("method", METHODS)
+def test_group_draws_have_the_joint_moments(method):
+    labels = np.arange(12) // 3
+    covariance = autoregressive(12, 0.9)
+    solution = solve_s_vector(covariance, method, feature_groups=labels)
+    slope, spread = conditional_moments(DenseDraws.prepare(covariance, solution.S), 12, 12)
+    np.testing.assert_allclose(covariance @ slope, covariance - solution.matrix, atol=1e-10)
+    np.testing.assert_allclose(slope.T @ covariance @ slope + spread, covariance, atol=1e-9)
+
+
+@pytest.mark.parametrize(
+    "model", [GaussianModel(), CopulaModel(), FixedXModel()], ids=["gaussian", "copula", "fixed-X"]
+)
+def test_groups_move_further_than_their_members_alone(model):
+    X, labels = paired_features(spawn(56, 1)[0], 400)
+    alone, together = model.fit(X), model.fit(X, feature_groups=labels)
+    one_of_each = model.fit(X[:, ::2])
+    assert alone.s.max() < 0.05
+    assert (together.s[::2] > 0.8 * one_of_each.s).all()
+    copies = together.sample(X, spawn(56, 2)[1])
+    # copies of a group keep the group's own dependence
+    found = np.corrcoef(copies, rowvar=False)
+    np.testing.assert_allclose(found, np.corrcoef(X, rowvar=False), atol=0.2)
+
+
+def test_fixed_x_groups_keep_the_products():
+    generator = spawn(57, 1)[0]
+    X, labels = paired_features(generator, 30)
+    fitted = FixedXModel().fit(X, feature_groups=labels)
+    copies = fitted.sample(X, generator)
+    fixed = np.ones((30, 1))
+    moments = second_moments(fixed, X, copies)
+    for group in range(3):
+        members = labels == group
+        left, right = X.copy(), copies.copy()
+        left[:, members], right[:, members] = copies[:, members], X[:, members]
+        np.testing.assert_allclose(second_moments(fixed, left, right), moments, atol=1e-8)
+
+
+def test_repeated_features_inside_a_group_are_copied():
+    generator = spawn(58, 1)[0]
+    X = table(generator, 60, 4)
+    X[:, 1] = 2.0 * X[:, 0] - 1.0
+    assert GaussianModel().fit(X).has_copy.tolist() == [False, False, True, True]
+    together = GaussianModel().fit(X, feature_groups=np.array([0, 0, 1, 2]))
+    assert together.has_copy.all() and together.s.min() > 0.2
+    apart = GaussianModel().fit(X, feature_groups=np.array([0, 1, 1, 2]))
+    assert apart.has_copy.tolist() == [False, False, True, True]
 
 
 # --- copula -----------------------------------------------------------------------------------

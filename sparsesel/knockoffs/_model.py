@@ -99,6 +99,7 @@ class FeatureModel(Protocol):
         *,
         covariates: np.ndarray | None = None,
         sample_weight: np.ndarray | None = None,
+        feature_groups: np.ndarray | None = None,
     ) -> FittedModel:
         """Fit the model to the rows of X."""
 
@@ -156,8 +157,17 @@ def as_weights(sample_weight: np.ndarray | None, n_rows: int) -> np.ndarray:
     return weights / weights.sum()
 
 
-def condition(X: np.ndarray, covariates: np.ndarray, weights: np.ndarray) -> Conditioning:
-    """Find the features that are copied and regress them on what is conditioned on."""
+def condition(
+    X: np.ndarray,
+    covariates: np.ndarray,
+    weights: np.ndarray,
+    feature_groups: np.ndarray | None = None,
+) -> Conditioning:
+    """Find the features that are copied and regress them on what is conditioned on.
+
+    Features that repeat one another inside one group are copied: the group is told apart as a
+    whole.
+    """
     n_features = X.shape[1]
     seen = weights > 0
     X, covariates, weights = X[seen], covariates[seen], weights[seen]
@@ -181,6 +191,9 @@ def condition(X: np.ndarray, covariates: np.ndarray, weights: np.ndarray) -> Con
     residuals = X - fixed @ regression(X, fixed, root)[0]
     groups = repeated_columns(residuals[:, free] * (root / spread[free]), precision)
     positions = np.flatnonzero(free)
+    if feature_groups is not None:
+        labels = np.asarray(feature_groups)[positions]
+        groups = [group for group in groups if len(set(labels[list(group)])) > 1]
     repeated = np.array([positions[group[0]] for group in groups], dtype=np.intp)
     members = np.zeros(n_features, dtype=bool)
     for group in groups:

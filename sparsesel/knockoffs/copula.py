@@ -94,6 +94,7 @@ class CopulaModel:
         *,
         covariates: np.ndarray | None = None,
         sample_weight: np.ndarray | None = None,
+        feature_groups: np.ndarray | None = None,
     ) -> FittedCopula:
         """Fit the marginals and the latent Gaussian model.
 
@@ -105,6 +106,8 @@ class CopulaModel:
             Columns that are conditioned on.
         sample_weight : ndarray of shape (n_rows,), default=None
             Weights of the rows in the estimates.
+        feature_groups : ndarray of shape (n_features,), default=None
+            Labels of groups that are told from their copies as a whole.
 
         Returns
         -------
@@ -118,7 +121,7 @@ class CopulaModel:
         """
         estimate = estimator(self.covariance)
         Z, weights = as_covariates(covariates, len(X)), as_weights(sample_weight, len(X))
-        roles = condition(X, Z, weights)
+        roles = condition(X, Z, weights, feature_groups)
         seen = weights > 0
         weights = weights[seen]
         columns = np.asarray(X[np.ix_(seen, roles.has_copy)], dtype=np.float64)
@@ -132,7 +135,10 @@ class CopulaModel:
             latent.sweep(*_estimated(latent, weights, within))
         conditioning, covariance = _estimated(latent, weights, estimate)
         settings = GaussianModel(self.covariance, s_vector=self.s_vector)
-        gaussian = fitted_gaussian(settings, conditioning, covariance, len(columns))
+        labels = None
+        if feature_groups is not None:
+            labels = np.asarray(feature_groups)[roles.has_copy]
+        gaussian = fitted_gaussian(settings, conditioning, covariance, len(columns), labels)
         s = np.zeros(X.shape[1])
         s[roles.has_copy] = gaussian.s
         return FittedCopula(self, s, roles.has_copy, roles, marginals, covariance, gaussian)

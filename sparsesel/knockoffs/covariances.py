@@ -41,6 +41,11 @@ def variances(covariance: Covariance) -> np.ndarray:
     return np.diagonal(covariance).copy()
 
 
+def dense(covariance: Covariance) -> np.ndarray:
+    """The matrix itself."""
+    return covariance.dense() if isinstance(covariance, LowRankCovariance) else covariance
+
+
 def scaled(covariance: Covariance, scale: np.ndarray) -> Covariance:
     """The covariance after each feature is multiplied by its entry of ``scale``."""
     if isinstance(covariance, LowRankCovariance):

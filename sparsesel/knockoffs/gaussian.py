@@ -31,7 +31,15 @@ from sparsesel.knockoffs._model import (
     count_few_valued,
     pair,
 )
-from sparsesel.knockoffs.covariances import Covariance, estimator, scaled, subset, variances
+from sparsesel.knockoffs.covariances import (
+    Covariance,
+    Estimator,
+    dense,
+    estimator,
+    scaled,
+    subset,
+    variances,
+)
 from sparsesel.knockoffs.low_rank import LowRankCovariance, capacitance
 from sparsesel.knockoffs.s_vectors import (
     SVector,
@@ -96,6 +104,7 @@ LowRankCovariance, default="ledoit_wolf"
         *,
         covariates: np.ndarray | None = None,
         sample_weight: np.ndarray | None = None,
+        feature_groups: np.ndarray | None = None,
     ) -> FittedGaussian:
         """Fit the model to the rows of X.
 
@@ -107,6 +116,8 @@ LowRankCovariance, default="ledoit_wolf"
             Columns that are conditioned on.
         sample_weight : ndarray of shape (n_rows,), default=None
             Weights of the rows in the estimates.
+        feature_groups : ndarray of shape (n_features,), default=None
+            Labels of groups that are told from their copies as a whole.
 
         Returns
         -------
@@ -122,10 +133,13 @@ LowRankCovariance, default="ledoit_wolf"
         Z = as_covariates(covariates, len(X))
         weights = as_weights(sample_weight, len(X))
         if isinstance(self.covariance, str):
-            conditioning, covariance = _estimated(self.covariance, X, Z, weights)
+            conditioning = condition(X, Z, weights, feature_groups)
+            covariance_of = estimator(self.covariance)
+            conditioning, covariance = _estimated(covariance_of, conditioning, X, Z, weights)
         else:
             conditioning, covariance = self._given(X, Z, weights)
-        fitted = fitted_gaussian(self, conditioning, covariance, int((weights > 0).sum()))
+        n_rows = int((weights > 0).sum())
+        fitted = fitted_gaussian(self, conditioning, covariance, n_rows, feature_groups)
         few = count_few_valued(X[weights > 0], np.flatnonzero(fitted.has_copy))
         return replace(fitted, n_few_valued=few)
 
@@ -254,11 +268,13 @@ class FittedGaussian:
 
 
 def _estimated(
-    estimate: str, X: np.ndarray, Z: np.ndarray, weights: np.ndarray
+    covariance_of: Estimator,
+    conditioning: Conditioning,
+    X: np.ndarray,
+    Z: np.ndarray,
+    weights: np.ndarray,
 ) -> tuple[Conditioning, Covariance]:
-    """Conditioning and correlation matrix from the rows of positive weight."""
-    covariance_of = estimator(estimate)
-    conditioning = condition(X, Z, weights)
+    """Correlation matrix from the rows of positive weight."""
     if not conditioning.has_copy.any():
         return conditioning, np.empty((0, 0))
     seen = weights > 0
@@ -275,13 +291,17 @@ def _nearly_singular(solution: SVector) -> Assumptions:
             "the correlation matrix is not singular",
             VIOLATED,
             f"the identity was mixed in with weight {solution.shrinkage:.1e}; features that others "
-            "determine have no power",
+            "determine have no power, unless they share a group",
         ),
     )
 
 
 def fitted_gaussian(
-    settings: GaussianModel, conditioning: Conditioning, covariance: Covariance, n_rows: int
+    settings: GaussianModel,
+    conditioning: Conditioning,
+    covariance: Covariance,
+    n_rows: int,
+    feature_groups: np.ndarray | None = None,
 ) -> FittedGaussian:
     """Find the s-vector and prepare the draws; the covariance has unit diagonal."""
     has_copy = conditioning.has_copy
@@ -289,17 +309,24 @@ def fitted_gaussian(
     solution = SVector(s[has_copy], settings.s_vector, 0.0, 0, SVectorStatus.CONVERGED, 0.0)
     draws: DenseDraws | LowRankDraws | None = None
     if has_copy.any():
+        labels = None
+        if feature_groups is not None:
+            labels = np.asarray(feature_groups)[has_copy]
+            covariance = dense(covariance)
         covariance, shrinkage = well_conditioned(covariance)
-        solution = replace(_solution(covariance, settings.s_vector), shrinkage=shrinkage)
+        solution = _solution(covariance, settings.s_vector, labels)
+        solution = replace(solution, shrinkage=shrinkage)
         if isinstance(covariance, LowRankCovariance):
             draws = LowRankDraws.prepare(covariance, solution.s)
         else:
-            draws = DenseDraws.prepare(covariance, solution.s)
+            draws = DenseDraws.prepare(covariance, solution.S)
         s[has_copy] = solution.s
     return FittedGaussian(settings, s, has_copy, solution, n_rows, conditioning, draws)
 
 
-def _solution(covariance: Covariance, method: str) -> SVector:
+def _solution(covariance: Covariance, method: str, labels: np.ndarray | None) -> SVector:
+    if labels is not None:
+        return solve_s_vector(covariance, method, feature_groups=labels)
     if isinstance(covariance, LowRankCovariance) or len(covariance) <= LARGEST_DENSE:
         return solve_s_vector(covariance, method)
     s = block_diagonal_s_vector(covariance, method)
