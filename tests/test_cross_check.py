@@ -1,4 +1,4 @@
-"""`cross_check`: honest fits pass, falsified ones and other data do not; gaps equal the oracle's."""
+"""`cross_check`: honest fits pass, falsified fits and other data do not; gaps equal an oracle's."""
 
 from __future__ import annotations
 
