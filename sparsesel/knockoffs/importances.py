@@ -59,10 +59,11 @@ a good ridge parameter. *Technometrics* 21, 215-223.
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
 from collections.abc import Mapping
 from dataclasses import dataclass
 from types import MappingProxyType
-from typing import Any, ClassVar, Protocol
+from typing import Any, ClassVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -71,7 +72,7 @@ from scipy.special import expit, logit
 from sklearn.base import clone, is_classifier
 from sklearn.utils.validation import has_fit_parameter
 
-from sparsesel.engine import BankResult, DesignMatrix, Keep, Problems, as_design, solve_bank
+from sparsesel.engine import BankResult, DesignMatrix, Keep, Problems, Status, as_design, solve_bank
 from sparsesel.knockoffs._model import PairedTable
 
 __all__ = [
@@ -93,10 +94,10 @@ __all__ = [
 
 FloatArray = NDArray[np.float64]
 
-# The grid of penalties: three decades in steps of 7%, solved in parts of a decade and a bit.
-_GRID, _ALPHA_MIN_RATIO, _PART = 100, 1e-3, 20
-# The smallest loss must lie this many points (a factor of two) above the end to be believed.
-_BEYOND = 10
+# The grid of penalties: three decades in steps of 7%, solved in parts of a factor of 2.3.
+_GRID, _ALPHA_MIN_RATIO, _PART = 100, 1e-3, 12
+# The smallest loss must lie this many points (a factor of 1.4) above the end to be believed.
+_BEYOND = 5
 # Ridge penalties that are tried, relative to the largest squared singular value.
 _RIDGE_GRID = np.geomspace(1e3, 1e-6, 100)
 
@@ -215,7 +216,7 @@ class Measured:
     fit: EngineFit | None = None
 
 
-class Importance(Protocol):
+class Importance(ABC):
     """A rule that gives every column of the widened table a size.
 
     Attributes
@@ -224,16 +225,19 @@ class Importance(Protocol):
         Whether the contrast is the signed maximum instead of the difference.
     """
 
-    signed_maximum: ClassVar[bool]
+    signed_maximum: ClassVar[bool] = False
 
+    @abstractmethod
     def describe(self) -> str:
         """What a claim calls the importance."""
 
-    def check(self, problem: ImportanceProblem) -> None:
-        """Refuse a problem that the rule can't be applied to, with a ValueError."""
-
+    @abstractmethod
     def sizes(self, wide: WidenedTable, generator: np.random.Generator) -> Sizes:
         """Sizes of the columns, by a rule that treats all penalised ones alike."""
+
+    def objection(self, problem: ImportanceProblem) -> str:
+        """Say why the rule can't be applied to a problem; empty where it can."""
+        return ""
 
 
 def measure_contrasts(
@@ -275,10 +279,11 @@ def measure_contrasts(
     >>> model = GaussianModel().fit(X)
     >>> table = model.draw(X, 3 * X[:, 1] + generator.standard_normal(200), generator)
     >>> problem = ImportanceProblem(table, "squared_error", model.has_copy, np.arange(3))
-    >>> measure_contrasts(MarginalDifference(), problem, generator).contrast.round(1).tolist()
-    [0.0, 0.9, -0.0]
+    >>> int(measure_contrasts(MarginalDifference(), problem, generator).contrast.argmax())
+    1
     """
-    importance.check(problem)
+    if objection := importance.objection(problem):
+        raise ValueError(objection)
     if not problem.has_copy.any():
         return Measured(np.zeros(problem.n_units))
     wide = WidenedTable.of(problem, generator)
@@ -294,9 +299,13 @@ def measure_contrasts(
     if importance.signed_maximum:
         contrast = _signed_maximum(original, copy, units, problem.n_units)
     else:
-        contrast = np.bincount(units, original, problem.n_units)
-        contrast -= np.bincount(units, copy, problem.n_units)
+        contrast = _summed(original, units, problem.n_units)
+        contrast -= _summed(copy, units, problem.n_units)
     return Measured(contrast, sizes.results, wide.table, sizes.fit)
+
+
+def _summed(sizes: FloatArray, units: NDArray[np.int64], n_units: int) -> FloatArray:
+    return np.asarray(np.bincount(units, sizes, n_units), dtype=np.float64)
 
 
 def _signed_maximum(
@@ -447,7 +456,7 @@ def held_out_folds(
 
 
 @dataclass(frozen=True)
-class LassoDifference:
+class LassoDifference(Importance):
     """Difference of the coefficients of a lasso or elastic net with cross-validated penalty.
 
     Parameters
@@ -464,15 +473,11 @@ class LassoDifference:
 
     l1_ratio: float = 1.0
     n_folds: int = 5
-    signed_maximum: ClassVar[bool] = False
 
     def describe(self) -> str:
         """What a claim calls the importance."""
         kind = "lasso" if self.l1_ratio == 1.0 else f"elastic net (l1_ratio {self.l1_ratio:g})"
         return f"the coefficient difference of a {kind} with cross-validated penalty"
-
-    def check(self, problem: ImportanceProblem) -> None:
-        """Any problem will do; too few rows of a class are refused when folds are made."""
 
     def sizes(self, wide: WidenedTable, generator: np.random.Generator) -> Sizes:
         """Sizes |b_j| s_j at the chosen penalty."""
@@ -509,7 +514,7 @@ class LassoDifference:
 
 
 @dataclass(frozen=True)
-class EntryPoint:
+class EntryPoint(Importance):
     """The penalty at which a column enters the lasso path, with the signed maximum.
 
     References
@@ -523,32 +528,33 @@ class EntryPoint:
         """What a claim calls the importance."""
         return "the signed penalty of entry into the lasso path"
 
-    def check(self, problem: ImportanceProblem) -> None:
-        """Any problem will do."""
-
     def sizes(self, wide: WidenedTable, generator: np.random.Generator) -> Sizes:
         """Sizes in units of the penalty; 0 for columns that have not entered."""
         whole = wide.problems(wide.problem.weights)
         most = max(1, min(len(wide.penalized), int(np.sum(wide.problem.weights > 0))) // 2)
         result = wide.solve(whole, _GRID, Keep(coefficients=True, entries=most))
         assert result.coef is not None
-        path, alphas = result.coef[0].tocoo(), result.alphas[0]
-        first = np.full(len(wide.position), _GRID)
-        np.minimum.at(first, path.coords[1], path.coords[0])
-        entered = np.flatnonzero(first < _GRID)
-        k = first[entered]
-        at_entry = np.abs(np.asarray(result.coef[0].tocsr()[k, entered]).reshape(-1))
-        weight = wide.penalty_weights[entered]
-        free = weight == 0  # covariates, whose size is not used
-        u = at_entry * wide.scale[entered] / np.where(free, 1.0, weight)
-        d = alphas[np.maximum(k - 1, 0)] - alphas[k]
-        sizes = np.zeros(len(first))
-        within = np.divide(d * u, d + u, out=np.zeros_like(u), where=d + u > 0)
-        sizes[entered] = alphas[k] + within
-        last = int(np.max(k[~free], initial=0))
+        reached = np.flatnonzero(result.status[0] != Status.NOT_REACHED)
+        path, alphas = result.coef[0].tocsc(), result.alphas[0]
+        sizes = np.zeros(len(wide.position))
+        scale = wide.scale
+        for j in wide.penalized:
+            entries = slice(path.indptr[j], path.indptr[j + 1])
+            nonzero = np.flatnonzero(path.data[entries])
+            if nonzero.size:
+                first = path.indptr[j] + nonzero[np.argmin(path.indices[entries][nonzero])]
+                u = abs(path.data[first]) * scale[j] / wide.penalty_weights[j]
+                sizes[j] = _entry(alphas, path.indices[first], u)
+        last = int(reached[-1])
         coef = result.coef[0][[last]].toarray()[0]
         fit = EngineFit(whole, float(alphas[last]), coef, float(result.intercept[0, last]))
         return Sizes(sizes, (result,), fit)
+
+
+def _entry(alphas: FloatArray, k: int, u: float) -> float:
+    """Penalty of entry of a column that is first seen at grid point k with coefficient u."""
+    d = alphas[max(k - 1, 0)] - alphas[k]
+    return float(alphas[k] + (d * u / (d + u) if d > 0 else 0.0))
 
 
 # ---------------------------------------------------------------------------------------------
@@ -619,20 +625,15 @@ def _working_response(
 
 
 @dataclass(frozen=True)
-class MarginalDifference:
+class MarginalDifference(Importance):
     """Difference of the absolute partial correlations with the outcome, given the covariates.
 
     With log loss of the score statistics of single columns.
     """
 
-    signed_maximum: ClassVar[bool] = False
-
     def describe(self) -> str:
         """What a claim calls the importance."""
         return "the difference of marginal associations"
-
-    def check(self, problem: ImportanceProblem) -> None:
-        """Any problem will do."""
 
     def sizes(self, wide: WidenedTable, generator: np.random.Generator) -> Sizes:
         """Sizes |z_j'u| / (|z_j| |u| v_j)."""
@@ -651,7 +652,7 @@ class MarginalDifference:
 
 
 @dataclass(frozen=True)
-class RidgeDifference:
+class RidgeDifference(Importance):
     """Difference of ridge coefficients, the penalty by generalised cross-validation.
 
     With log loss one Newton step from the null model.
@@ -661,14 +662,9 @@ class RidgeDifference:
     Golub, Heath and Wahba (1979).
     """
 
-    signed_maximum: ClassVar[bool] = False
-
     def describe(self) -> str:
         """What a claim calls the importance."""
         return "the ridge coefficient difference, penalty by generalised cross-validation"
-
-    def check(self, problem: ImportanceProblem) -> None:
-        """Any problem will do."""
 
     def sizes(self, wide: WidenedTable, generator: np.random.Generator) -> Sizes:
         """Sizes |b_j| s_j at the chosen penalty."""
@@ -715,7 +711,7 @@ def _ridge(rows: FloatArray, u: FloatArray, n_fixed: int, n_rows: int) -> FloatA
 
 
 @dataclass(frozen=True)
-class EstimatorDifference:
+class EstimatorDifference(Importance):
     """Difference of the importances that an estimator of scikit-learn gives the columns.
 
     Parameters
@@ -727,33 +723,33 @@ class EstimatorDifference:
     """
 
     estimator: Any
-    signed_maximum: ClassVar[bool] = False
 
     def describe(self) -> str:
         """What a claim calls the importance."""
         return f"the difference of the importances of {type(self.estimator).__name__}"
 
-    def check(self, problem: ImportanceProblem) -> None:
-        """Refuse weights that the estimator does not take, and classes where there are none."""
+    def objection(self, problem: ImportanceProblem) -> str:
+        """Weights that the estimator does not take, or a classifier without classes."""
         name, given = type(self.estimator).__name__, problem.penalty_weights
         if given is not None and not (given == 1).all():
-            raise ValueError(
+            return (
                 f"penalty_weights holds finite weights other than 1, but importances come from "
                 f"{name}, which knows no penalty weights. Allowed are 1 and infinity (left out): "
                 "leave the others away, or use importance='lasso'."
             )
         weighted = problem.table.sample_weight is not None
         if weighted and not has_fit_parameter(self.estimator, "sample_weight"):
-            raise ValueError(
+            return (
                 f"sample_weight was given, but {name}.fit does not take it. Fit without weights, "
                 "or use an estimator that takes them."
             )
         if is_classifier(self.estimator) and problem.loss != "log_loss":
-            raise ValueError(
+            return (
                 f"{name} is a classifier, but the outcome was read as numbers (the loss is "
                 "'squared_error'). Use a regressor, or an outcome with two classes and "
                 "loss='log_loss'."
             )
+        return ""
 
     def sizes(self, wide: WidenedTable, generator: np.random.Generator) -> Sizes:
         """Sizes |coef_| s_j, or feature_importances_ where they are positive."""
@@ -825,12 +821,12 @@ def as_importance(importance: Any) -> Importance:
     """
     if isinstance(importance, str) and importance in IMPORTANCES:
         return IMPORTANCES[importance]
-    if hasattr(importance, "sizes") and hasattr(importance, "signed_maximum"):
+    if isinstance(importance, Importance):
         return importance
     if hasattr(importance, "fit") and hasattr(importance, "get_params"):
         return EstimatorDifference(importance)
     raise ValueError(
         f"importance={importance!r} is unknown; allowed are {', '.join(map(repr, IMPORTANCES))}, "
-        "an estimator of scikit-learn with coef_ or feature_importances_, or a rule with `sizes`. "
+        "an estimator of scikit-learn with coef_ or feature_importances_, or an Importance. "
         "'lasso' is the usual choice."
     )
