@@ -4,13 +4,22 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from scipy.stats import ks_2samp, kstest
+from scipy.stats import ks_2samp, kstest, norm, poisson
 from sklearn.covariance import OAS, LedoitWolf
 from statsmodels.stats._knockoff import _design_knockoff_equi
 
-from sparsesel.knockoffs import FixedXModel, GaussianModel, LowRankCovariance, s_vector
+from sparsesel.knockoffs import (
+    CopulaModel,
+    FixedXModel,
+    GaussianModel,
+    LowRankCovariance,
+    s_vector,
+    solve_s_vector,
+)
 from sparsesel.knockoffs._gaussian_draws import DenseDraws, LowRankDraws, safe_root
+from sparsesel.knockoffs._marginals import marginal
 from sparsesel.knockoffs._model import repeated_columns
+from sparsesel.knockoffs.copula import _Precision, _truncated
 from sparsesel.knockoffs.covariances import ESTIMATORS, number_of_factors
 from sparsesel.knockoffs.fixed_x import _random_basis
 from sparsesel.tasks import spawn
@@ -229,7 +238,7 @@ def test_given_joint_covariance_is_conditioned():
     deviation = np.sqrt(np.diag(left))
     expected = s_vector(left / np.outer(deviation, deviation), "mvr")
     np.testing.assert_allclose(fitted.s, expected, rtol=1e-6)
-    centre = fitted._conditioning.centre(X, Z)
+    centre = fitted.conditioning.centre(X, Z)
     np.testing.assert_allclose(centre, mean[:3] + (Z - mean[3:]) @ slopes, atol=1e-10)
     # the same joint covariance as diagonal plus rank one
     loadings = np.array([[1.0], [0.5], [0.8], [0.6], [0.9]])
@@ -238,7 +247,7 @@ def test_given_joint_covariance_is_conditioned():
     two = GaussianModel(low.dense(), mean=mean).fit(X, covariates=Z)
     np.testing.assert_allclose(one.s, two.s, rtol=1e-5)
     np.testing.assert_allclose(
-        one._conditioning.centre(X, Z), two._conditioning.centre(X, Z), atol=1e-10
+        one.conditioning.centre(X, Z), two.conditioning.centre(X, Z), atol=1e-10
     )
 
 
@@ -250,9 +259,9 @@ def test_integer_weights_equal_repeated_rows_in_centre_and_scale():
     one = GaussianModel("oas").fit(X, covariates=Z, sample_weight=weights)
     two = GaussianModel("oas").fit(X[repeated], covariates=Z[repeated])
     np.testing.assert_allclose(
-        one._conditioning.coefficients, two._conditioning.coefficients, atol=1e-10
+        one.conditioning.coefficients, two.conditioning.coefficients, atol=1e-10
     )
-    np.testing.assert_allclose(one._conditioning.scale, two._conditioning.scale, rtol=1e-10)
+    np.testing.assert_allclose(one.conditioning.scale, two.conditioning.scale, rtol=1e-10)
     scaled = GaussianModel("oas").fit(X, covariates=Z, sample_weight=10.0 * weights)
     np.testing.assert_allclose(one.s, scaled.s, rtol=1e-8)
 
@@ -266,7 +275,9 @@ def degenerate(generator, n_rows=80):
     return X, Z
 
 
-@pytest.mark.parametrize("model", [GaussianModel(), FixedXModel()], ids=["gaussian", "fixed-X"])
+@pytest.mark.parametrize(
+    "model", [GaussianModel(), CopulaModel(), FixedXModel()], ids=["gaussian", "copula", "fixed-X"]
+)
 @pytest.mark.parametrize("kind", [np.float64, np.float32])
 def test_features_without_a_copy(model, kind):
     X, Z = degenerate(spawn(31, 1)[0])
@@ -283,7 +294,7 @@ def test_features_without_a_copy(model, kind):
 def test_nothing_to_copy():
     X = np.ones((20, 3))
     generator = spawn(32, 1)[0]
-    for model in (GaussianModel(), FixedXModel()):
+    for model in (GaussianModel(), CopulaModel(), FixedXModel()):
         fitted = model.fit(X)
         assert not fitted.has_copy.any()
         drawn = fitted.draw(X, generator.standard_normal(20), generator)
@@ -316,6 +327,186 @@ def test_gaussian_assumptions_tell_what_was_checked():
     assert given[1][1] == "can't be checked from the data"
     singular = GaussianModel(np.full((10, 10), 0.5) + 0.5).fit(X).assumptions()
     assert "mixed in" in singular[-1][2]
+
+
+def test_two_valued_columns_are_not_called_gaussian():
+    generator = spawn(47, 1)[0]
+    X = table(generator, 100, 5)
+    X[:, 2] = X[:, 2] > 0
+    _, state, detail = GaussianModel().fit(X).assumptions()[0]
+    assert state == "checked and violated" and "1 take at most 10 values" in detail
+
+
+# --- groups -----------------------------------------------------------------------------------
+
+
+def paired_features(generator, n_rows):
+    """Six features in three groups of two, the second a noisy repetition of the first."""
+    first = table(generator, n_rows, 3, 0.5)
+    second = first + 0.05 * generator.standard_normal((n_rows, 3))
+    return np.stack([first, second], axis=2).reshape(n_rows, 6), np.arange(6) // 2
+
+
+@pytest.mark.parametrize("method", METHODS)
+def test_group_draws_have_the_joint_moments(method):
+    labels = np.arange(12) // 3
+    covariance = autoregressive(12, 0.9)
+    solution = solve_s_vector(covariance, method, feature_groups=labels)
+    slope, spread = conditional_moments(DenseDraws.prepare(covariance, solution.S), 12, 12)
+    np.testing.assert_allclose(covariance @ slope, covariance - solution.matrix, atol=1e-10)
+    np.testing.assert_allclose(slope.T @ covariance @ slope + spread, covariance, atol=1e-9)
+
+
+@pytest.mark.parametrize(
+    "model", [GaussianModel(), CopulaModel(), FixedXModel()], ids=["gaussian", "copula", "fixed-X"]
+)
+def test_groups_move_further_than_their_members_alone(model):
+    X, labels = paired_features(spawn(56, 1)[0], 400)
+    alone, together = model.fit(X), model.fit(X, feature_groups=labels)
+    one_of_each = model.fit(X[:, ::2])
+    assert alone.s.max() < 0.05
+    assert (together.s[::2] > 0.8 * one_of_each.s).all()
+    copies = together.sample(X, spawn(56, 2)[1])
+    # copies of a group keep the group's own dependence
+    found = np.corrcoef(copies, rowvar=False)
+    np.testing.assert_allclose(found, np.corrcoef(X, rowvar=False), atol=0.2)
+
+
+def test_fixed_x_groups_keep_the_products():
+    generator = spawn(57, 1)[0]
+    X, labels = paired_features(generator, 30)
+    fitted = FixedXModel().fit(X, feature_groups=labels)
+    copies = fitted.sample(X, generator)
+    fixed = np.ones((30, 1))
+    moments = second_moments(fixed, X, copies)
+    for group in range(3):
+        members = labels == group
+        left, right = X.copy(), copies.copy()
+        left[:, members], right[:, members] = copies[:, members], X[:, members]
+        np.testing.assert_allclose(second_moments(fixed, left, right), moments, atol=1e-8)
+
+
+def test_repeated_features_inside_a_group_are_copied():
+    generator = spawn(58, 1)[0]
+    X = table(generator, 60, 4)
+    X[:, 1] = 2.0 * X[:, 0] - 1.0
+    assert GaussianModel().fit(X).has_copy.tolist() == [False, False, True, True]
+    together = GaussianModel().fit(X, feature_groups=np.array([0, 0, 1, 2]))
+    assert together.has_copy.all() and together.s.min() > 0.2
+    apart = GaussianModel().fit(X, feature_groups=np.array([0, 1, 1, 2]))
+    assert apart.has_copy.tolist() == [False, False, True, True]
+
+
+# --- copula -----------------------------------------------------------------------------------
+
+
+def mixed_table(generator, n_rows, correlation=0.7):
+    """Two-valued, lognormal, count, half zero and normal columns with one latent dependence."""
+    latent = table(generator, n_rows, 10, correlation)
+    X = latent.copy()
+    X[:, 0::5] = latent[:, 0::5] > 0.4
+    X[:, 1::5] = np.exp(latent[:, 1::5])
+    X[:, 2::5] = poisson.ppf(norm.cdf(latent[:, 2::5]), 1.5)
+    X[:, 3::5] = np.maximum(latent[:, 3::5], 0.0)
+    return X
+
+
+def test_copula_keeps_the_values_of_discrete_columns():
+    generator = spawn(48, 1)[0]
+    X = mixed_table(generator, 400)
+    copies = CopulaModel().fit(X).sample(X, generator)
+    for j in (0, 5, 2, 7):
+        assert set(np.unique(copies[:, j])) <= set(np.unique(X[:, j]))
+    assert (copies[:, [1, 6]] > 0).all()
+    assert (copies[:, [3, 8]] >= 0).all()
+    # the share of zeros: two samples of 400 with the same probability
+    difference = (copies[:, [3, 8]] == 0).mean(0) - (X[:, [3, 8]] == 0).mean(0)
+    assert (np.abs(difference) < 4.0 * np.sqrt(0.5 / 400)).all()
+
+
+def test_copula_finds_the_latent_correlation():
+    """Standard error of a tetrachoric correlation at .7 from 4,000 rows is below .025."""
+    X = mixed_table(spawn(49, 1)[0], 4_000)
+    fitted = CopulaModel("oas").fit(X)
+    latent = autoregressive(10, 0.7)
+    np.testing.assert_allclose(fitted._covariance, latent, atol=0.1)
+
+
+def test_copula_moments_agree_after_a_swap():
+    """E x_j x_k = E x~_j x_k for j != k within 5 standard errors of the paired difference."""
+    generator = spawn(50, 1)[0]
+    X = mixed_table(generator, 6_000)
+    fitted = CopulaModel().fit(X)
+    fresh = mixed_table(generator, 6_000)
+    copies = fitted.sample(fresh, generator)
+    left, moved = ((M - X.mean(0)) / X.std(0) for M in (fresh, copies))
+    left, moved = np.clip(left, -3, 3), np.clip(moved, -3, 3)
+    difference = np.einsum("ij,ik->ijk", left - moved, left)
+    error = difference.std(0) / np.sqrt(len(X))
+    z = difference.mean(0) / np.maximum(error, 1e-12)
+    z[np.eye(10, dtype=bool)] = 0.0
+    # the fit has the error of as many rows, which at most doubles the variance
+    assert (np.abs(z) < 5.0 * np.sqrt(2.0)).all()
+
+
+def test_copula_of_gaussian_rows_is_close_to_the_gaussian_model():
+    X = table(spawn(51, 1)[0], 3_000, 6)
+    one, two = CopulaModel().fit(X), GaussianModel().fit(X)
+    np.testing.assert_allclose(one.s, two.s, atol=0.05)
+
+
+def test_marginal_maps_invert_each_other():
+    generator = spawn(52, 1)[0]
+    smooth = np.exp(generator.standard_normal(200))
+    tied = np.maximum(generator.standard_normal(200), 0.0)
+    for column in (smooth, tied, (tied > 0.5).astype(float), np.floor(3 * smooth)):
+        shape = marginal(column, np.full(200, 1.0 / 200))
+        lower, upper = shape.bounds(column)
+        assert (lower <= upper).all()
+        inside = norm.ppf(0.5 * (norm.cdf(lower) + norm.cdf(upper)))
+        np.testing.assert_allclose(shape.back(inside), column, atol=1e-9)
+    shape = marginal(smooth, np.full(200, 1.0 / 200))
+    beyond = np.array([smooth.min() - 0.001, smooth.max() * 1.5])
+    np.testing.assert_allclose(shape.back(shape.bounds(beyond)[0]), beyond)
+    assert shape.back(np.array([3.5]))[0] > smooth.max()
+
+
+def test_marginal_of_integer_weights_equals_repeated_rows():
+    generator = spawn(53, 1)[0]
+    column = generator.integers(0, 6, 60).astype(float)
+    weights = generator.integers(1, 4, 60)
+    one = marginal(column, weights / weights.sum())
+    repeated = np.repeat(column, weights)
+    two = marginal(repeated, np.full(len(repeated), 1.0 / len(repeated)))
+    np.testing.assert_allclose(one.upper, two.upper, atol=1e-10)
+
+
+@pytest.mark.parametrize("low_rank", [False, True])
+def test_gibbs_conditionals_are_those_of_the_normal_distribution(low_rank):
+    generator = spawn(54, 1)[0]
+    covariance = LowRankCovariance(
+        generator.uniform(0.5, 1.0, 6), generator.standard_normal((6, 2))
+    )
+    dense = covariance.dense()
+    rest = generator.standard_normal((4, 6))
+    precision = _Precision.of(covariance if low_rank else dense, rest)
+    precision.replace(1, np.arange(4.0))
+    for j in (0, 1, 4):
+        others = np.delete(np.arange(6), j)
+        slope = np.linalg.solve(dense[np.ix_(others, others)], dense[others, j])
+        variance, mean = precision.given_others(j)
+        assert variance == pytest.approx(dense[j, j] - dense[others, j] @ slope)
+        np.testing.assert_allclose(mean, precision.rest[:, others] @ slope, atol=1e-10)
+
+
+def test_truncated_normal_draws():
+    """Uniform after the probability transform, far tails included."""
+    generator = spawn(55, 1)[0]
+    for low, high in ((-1.0, 0.5), (2.0, np.inf), (-np.inf, -3.0), (6.0, 6.5)):
+        drawn = _truncated(np.full(2_000, low), np.full(2_000, high), generator)
+        assert ((drawn >= low) & (drawn <= high)).all()
+        share = (norm.sf(low) - norm.sf(drawn)) / (norm.sf(low) - norm.sf(high))
+        assert kstest(share, "uniform").pvalue > 1e-4
 
 
 # --- fixed-X ----------------------------------------------------------------------------------

@@ -372,6 +372,121 @@ def test_block_approximation_is_valid_and_no_better_than_the_optimum(method):
             assert s.sum() <= s_vector(matrix, method).sum() * (1 + 1e-6)
 
 
+# --- groups -----------------------------------------------------------------------------------
+
+LABELS = {
+    "singles": lambda size: np.arange(size),
+    "neighbours": lambda size: np.arange(size) // 5,
+    "scattered": lambda size: np.arange(size) * 7 % 4,
+    "one": lambda size: np.zeros(size, dtype=int),
+}
+
+
+def inverse_root(matrix):
+    values, vectors = np.linalg.eigh(matrix)
+    return (vectors / np.sqrt(values)) @ vectors.T
+
+
+def blocks_only(matrix, labels):
+    return np.where(np.equal.outer(labels, labels), matrix, 0.0)
+
+
+@pytest.mark.parametrize("name", DENSE)
+@pytest.mark.parametrize("grouping", LABELS)
+@pytest.mark.parametrize("method", S_VECTOR_METHODS)
+def test_group_matrices_are_valid(name, grouping, method):
+    matrix = DENSE[name]
+    labels = LABELS[grouping](len(matrix))
+    solution = solve_s_vector(matrix, method, feature_groups=labels)
+    np.testing.assert_array_equal(solution.matrix, blocks_only(solution.matrix, labels))
+    assert np.linalg.eigvalsh(solution.matrix)[0] > -1e-12
+    assert np.linalg.eigvalsh(2.0 * matrix - solution.matrix)[0] >= 0
+    np.testing.assert_array_equal(solution.s, np.diag(solution.matrix))
+    assert solution.status is SVectorStatus.CONVERGED
+
+
+@pytest.mark.parametrize("name", DENSE)
+@pytest.mark.parametrize("method", S_VECTOR_METHODS)
+def test_groups_of_one_are_the_s_vector(name, method):
+    matrix = DENSE[name]
+    solution = solve_s_vector(matrix, method, feature_groups=np.arange(len(matrix)))
+    np.testing.assert_allclose(solution.s, s_vector(matrix, method), rtol=2e-4, atol=1e-6)
+
+
+@pytest.mark.parametrize("method", S_VECTOR_METHODS)
+def test_one_group_moves_as_far_as_it_can(method):
+    """With a single group S = Sigma: for all rules D = S is the symmetric optimum."""
+    matrix = DENSE["rotated"]
+    solution = solve_s_vector(matrix, method, feature_groups=np.zeros(len(matrix)))
+    np.testing.assert_allclose(solution.matrix, matrix, atol=2e-5)
+
+
+@pytest.mark.parametrize("grouping", ["neighbours", "scattered"])
+@pytest.mark.parametrize("method", ["mvr", "max_entropy"])
+def test_group_blocks_are_stationary(grouping, method):
+    """S^-1 = D^-1 inside every block, or S^-2 = D^-2 with every group whitened."""
+    matrix = DENSE["rotated"]
+    labels = LABELS[grouping](len(matrix))
+    S = solve_s_vector(matrix, method, feature_groups=labels, tol=1e-13, max_iter=500).matrix
+    root = inverse_root(blocks_only(matrix, labels))
+    whitened, S = root @ matrix @ root, root @ S @ root
+    pull, push = np.linalg.inv(2.0 * whitened - S), np.linalg.inv(S)
+    if method == "mvr":
+        pull, push = pull @ pull, push @ push
+    pull = blocks_only(pull, labels)
+    np.testing.assert_allclose(pull, push, atol=1e-5 * np.abs(push).max())
+
+
+@pytest.mark.parametrize("method", S_VECTOR_METHODS)
+def test_groups_do_not_depend_on_the_coordinates_inside(method):
+    """A linear change of coordinates inside each group changes S with it."""
+    generator = spawn(19, 1)[0]
+    matrix, labels = DENSE["rotated"][:20, :20], np.arange(20) // 4
+    mix = blocks_only(generator.standard_normal((20, 20)), labels)
+    expected = mix @ solve_s_vector(matrix, method, feature_groups=labels).matrix @ mix.T
+    moved = mix @ matrix @ mix.T
+    found = solve_s_vector(0.5 * (moved + moved.T), method, feature_groups=labels).matrix
+    np.testing.assert_allclose(found, expected, atol=2e-4 * np.abs(expected).max())
+
+
+@pytest.mark.parametrize("grouping", ["neighbours", "scattered"])
+def test_group_sdp_reaches_the_optimum_of_a_general_solver(grouping):
+    """The tied programme, stated in cvxpy with S_g = c_g Sigma_gg."""
+    cvxpy = pytest.importorskip("cvxpy")
+    matrix = DENSE["rotated"][:20, :20]
+    labels = LABELS[grouping](20)
+    S = solve_s_vector(matrix, "sdp", feature_groups=labels).matrix
+    codes = np.unique(labels)
+    c = cvxpy.Variable(len(codes))
+    parts = [np.where(np.logical_and.outer(labels == g, labels == g), matrix, 0.0) for g in codes]
+    slack = 2 * matrix - sum(c[i] * part for i, part in enumerate(parts))
+    sizes = np.array([(labels == g).sum() for g in codes])
+    limits = [c >= 0, c <= 1, slack >> 0]
+    optimum = cvxpy.Problem(cvxpy.Maximize(sizes @ c), limits).solve(solver="CLARABEL")
+    assert np.trace(S) == pytest.approx(optimum, rel=2e-6)
+
+
+def test_groups_help_where_features_repeat_one_another():
+    """Blocks at .99: single features hardly move, groups move as if they were independent."""
+    matrix = np.kron(np.eye(4), equicorrelated(5, 0.99))
+    alone = s_vector(matrix, "mvr")
+    together = solve_s_vector(matrix, "mvr", feature_groups=np.arange(20) // 5)
+    assert alone.max() < 0.03
+    np.testing.assert_allclose(together.matrix, matrix, atol=1e-6)
+
+
+@pytest.mark.parametrize("method", S_VECTOR_METHODS)
+def test_groups_in_other_units_and_with_a_constant(method):
+    generator = spawn(18, 1)[0]
+    matrix, labels = DENSE["rotated"], LABELS["neighbours"](35)
+    scale = np.r_[0.0, generator.uniform(0.5, 2.0, 34)]
+    given = matrix * scale * scale[:, None]
+    found = solve_s_vector(given, method, feature_groups=labels).matrix
+    assert (found[0] == 0).all()
+    inner = solve_s_vector(matrix[1:, 1:], method, feature_groups=labels[1:]).matrix
+    np.testing.assert_allclose(found[1:, 1:], inner * scale[1:] * scale[1:, None], rtol=1e-4)
+
+
 # --- bad input --------------------------------------------------------------------------------
 
 
@@ -392,6 +507,11 @@ def test_bad_covariances_are_refused(matrix, message):
 def test_unknown_method_is_refused():
     with pytest.raises(ValueError, match=r"'asdp' is unknown; allowed are 'mvr'.*usual choice"):
         s_vector(np.eye(2), "asdp")
+
+
+def test_labels_of_another_length_are_refused():
+    with pytest.raises(ValueError, match="one label per feature is needed"):
+        solve_s_vector(np.eye(3), feature_groups=np.arange(4))
 
 
 def test_bad_low_rank_covariances_are_refused():

@@ -272,8 +272,18 @@ def test_correlation_as_feature_groups():
     X = X[:, [0, 2, 1, 3, 4, 5]]  # blocks {0, 2}, {1, 3}, {4, 5}
     columns = resolved(make_table(X), feature_groups="correlation", covariates="Ab_42")
     np.testing.assert_array_equal(columns.unit_of, [0, 1, 0, -1, 2, 2])
-    assert columns.unit_names == ("age +1", "tau", "site_A +1")
+    assert columns.unit_names == ("age + p_tau", "tau", "site_A + site_B")
     by_rule = resolved(
         make_table(X), feature_groups=functools.partial(correlation_groups, cut=0.999)
     )
     assert by_rule.n_units == 6
+
+
+def test_names_of_clusters():
+    X = blocks(80, 2, 5, 0.95)
+    table = make_table(X, named=False)
+    columns = resolved(table, feature_groups="correlation")
+    assert columns.unit_names == ("x0 + x1 + x2 + 2 more", "x5 + x6 + x7 + 2 more")
+    # Clusters stay apart where columns have the same name.
+    table.names[:] = "x"
+    assert resolved(table, feature_groups="correlation").n_units == 2

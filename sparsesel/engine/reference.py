@@ -282,8 +282,13 @@ def reference_solution(
         For an unknown loss, a negative alpha, an l1_ratio outside [0, 1], or a response of the
         log loss other than 0 and 1.
     RuntimeError
-        When no solver finds an optimum, which is what happens when the unpenalised columns
-        separate the two classes and there is none.
+        When no solver finds an optimum.
+
+    Notes
+    -----
+    Where the unpenalised columns separate the two classes there is no optimum, only an infimum,
+    and a solver may report a point near it as "optimal". Its coefficients then mean nothing;
+    the engine refuses such a problem.
 
     Examples
     --------
@@ -493,9 +498,9 @@ def _solve(problem: Any, answer: Callable[[], Any]) -> tuple[Any, str, str]:
     if near is not None:
         return near
     raise RuntimeError(
-        f"no solver found an optimum ({'; '.join(heard)}). The problem must have one: finite "
-        "numbers, and for the log loss classes that the unpenalised columns don't separate. "
-        "Penalise these columns, or check the table for values that overflow."
+        f"no solver found an optimum ({'; '.join(heard)}). The numbers must be finite, "
+        "and their squares too. Check the table for values that overflow, and bring its columns "
+        "and the response to ordinary units."
     )
 
 

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 from sparsesel.knockoffs._model import PairedTable
+from sparsesel.knockoffs.copula import CopulaModel, FittedCopula
+from sparsesel.knockoffs.exchangeability import ExchangeabilityCheck, check_exchangeability
 from sparsesel.knockoffs.fixed_x import FittedFixedX, FixedXModel
 from sparsesel.knockoffs.gaussian import FittedGaussian, GaussianModel
 from sparsesel.knockoffs.low_rank import LowRankCovariance
@@ -17,6 +19,9 @@ from sparsesel.knockoffs.s_vectors import (
 
 __all__ = [
     "S_VECTOR_METHODS",
+    "CopulaModel",
+    "ExchangeabilityCheck",
+    "FittedCopula",
     "FittedFixedX",
     "FittedGaussian",
     "FixedXModel",
@@ -26,6 +31,7 @@ __all__ = [
     "SVector",
     "SVectorStatus",
     "block_diagonal_s_vector",
+    "check_exchangeability",
     "s_vector",
     "solve_s_vector",
 ]

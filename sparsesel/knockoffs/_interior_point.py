@@ -27,6 +27,10 @@ and keeping the dual equation leaves one p x p system:
 Each iteration solves (2) twice (Mehrotra 1992): once with mu = 0, and once with the mu that the
 last step lengths deserve and the second-order terms sym(dZ diag(x) K), dw x/s, dv x/u of the first.
 
+**Ties.**  For groups of features, s holds one value per group, and sum_j s_j counts each as often
+as it has members.  The derivatives with respect to a tied value are sums over its columns: K_jj,
+Z_jj and the system (2) are summed over the members of each group, and 1 becomes their number.
+
 Coordinate ascent on a log-barrier, the method of the s-vector literature, is not used here: where
 the optimum leaves many s_j at zero or repeats along a chain (autoregressive tables), it stops
 moving several percent short of the optimum, without a sign that it did.
@@ -56,6 +60,36 @@ _SHORTEST = 1e-5
 
 
 @dataclass(frozen=True)
+class Ties:
+    """Columns that share one value: neighbours, ``size`` of them in each group.
+
+    ``starts`` is the first column of each group, None where every column is on its own.
+    """
+
+    size: np.ndarray
+    starts: np.ndarray | None = None
+
+    @classmethod
+    def of(cls, sizes: np.ndarray) -> Ties:
+        """From the number of columns in each group."""
+        return cls(sizes.astype(np.float64), np.concatenate([[0], np.cumsum(sizes)[:-1]]))
+
+    def spread(self, values: np.ndarray) -> np.ndarray:
+        """The value of each column."""
+        return values if self.starts is None else np.repeat(values, self.size.astype(np.intp))
+
+    def pooled(self, values: np.ndarray) -> np.ndarray:
+        """Sums over the columns of each group."""
+        return values if self.starts is None else np.add.reduceat(values, self.starts)
+
+    def pooled_matrix(self, matrix: np.ndarray) -> np.ndarray:
+        """Sums over the columns and rows of each pair of groups."""
+        if self.starts is None:
+            return matrix
+        return np.add.reduceat(np.add.reduceat(matrix, self.starts, 0), self.starts, 1)
+
+
+@dataclass(frozen=True)
 class _Iterate:
     """Primal point, slack with factor and inverse, dual point with factor, last step lengths."""
 
@@ -81,29 +115,32 @@ class _Direction:
     upper: np.ndarray
 
 
-def maximize_sum(correlation: np.ndarray, *, tol: float, max_iter: int) -> SolverResult:
-    """Maximise sum(s) to a certified relative gap of ``tol``."""
-    iterate = _start(correlation)
+def maximize_sum(
+    correlation: np.ndarray, *, tol: float, max_iter: int, ties: Ties | None = None
+) -> SolverResult:
+    """Maximise sum(s) to a certified relative gap of ``tol``; with ties, s is per group."""
+    ties = Ties(np.ones(len(correlation))) if ties is None else ties
+    iterate = _start(correlation, ties)
     best = SolverResult(iterate.s, np.inf, 0)
     for n_iter in range(max_iter + 1):
-        gap = certified_gap(correlation, iterate.s, iterate.dual)
+        gap = certified_gap(correlation, iterate.s, iterate.dual, ties)
         if gap < best.gap:
             best = SolverResult(iterate.s, gap, n_iter)
         if gap <= tol or max(iterate.primal_step, iterate.dual_step) < 2 * _SHORTEST:
             break
-        iterate = _advance(correlation, iterate)
+        iterate = _advance(correlation, iterate, ties)
     return replace(best, n_iter=n_iter)
 
 
-def certified_gap(correlation: np.ndarray, s: np.ndarray, dual: np.ndarray) -> float:
-    """Distance bound (1), relative to sum(s), for a semidefinite dual matrix."""
+def certified_gap(correlation: np.ndarray, s: np.ndarray, dual: np.ndarray, ties: Ties) -> float:
+    """Distance bound (1), relative to the objective, for a semidefinite dual matrix."""
     bound = 2.0 * float(np.vdot(correlation, dual))
-    bound += float(np.maximum(1.0 - np.diagonal(dual), 0.0).sum())
-    total = float(s.sum())
+    bound += float(np.maximum(ties.size - ties.pooled(np.diagonal(dual)), 0.0).sum())
+    total = float(s @ ties.size)
     return (bound - total) / total
 
 
-def _start(correlation: np.ndarray) -> _Iterate:
+def _start(correlation: np.ndarray, ties: Ties) -> _Iterate:
     """Roughly the analytic centre, with the dual point on the central path through it.
 
     The size of the dual point is a tenth of the mu at which the Newton decrement of the barrier
@@ -111,12 +148,14 @@ def _start(correlation: np.ndarray) -> _Iterate:
     """
     centre = minimize_smooth(correlation, MaximumEntropy(), tol=0.3, max_iter=50).s
     s = np.minimum(centre, 0.8)
-    slack = add_diagonal(2.0 * correlation, -s)
+    if ties.starts is not None:
+        s = np.minimum.reduceat(s, ties.starts)
+    slack = add_diagonal(2.0 * correlation, -ties.spread(s))
     factor = _definite(slack)
     inverse = inverse_from_factor(factor.copy(order="K"))
-    curvature = add_diagonal(inverse * inverse, 1.0 / s**2 + 1.0 / (1.0 - s) ** 2)
-    ones = np.ones(len(s))
-    size = 0.1 * np.sqrt(ones @ ScaledSolver(curvature).solve(ones))
+    curvature = ties.pooled_matrix(inverse * inverse)
+    add_diagonal(curvature, 1.0 / s**2 + 1.0 / (1.0 - s) ** 2)
+    size = 0.1 * np.sqrt(ties.size @ ScaledSolver(curvature).solve(ties.size))
     return _Iterate(
         s=s,
         slack=slack,
@@ -139,19 +178,19 @@ def _definite(matrix: np.ndarray) -> np.ndarray:
     return factor
 
 
-def _advance(correlation: np.ndarray, at: _Iterate) -> _Iterate:
+def _advance(correlation: np.ndarray, at: _Iterate, ties: Ties) -> _Iterate:
     """One predictor-corrector iteration."""
     s, upper_slack = at.s, 1.0 - at.s
     complementarity = float(np.vdot(at.slack, at.dual) + s @ at.lower + upper_slack @ at.upper) / (
-        3 * len(s)
+        len(correlation) + 2 * len(s)
     )
     centring = max(0.02, (1.0 - min(at.primal_step, at.dual_step)) ** 1.5)
-    system = at.dual * at.inverse
+    system = ties.pooled_matrix(at.dual * at.inverse)
     add_diagonal(system, at.lower / s + at.upper / upper_slack)
     solver = ScaledSolver(system)
-    direction = _corrected_direction(at, solver, centring * complementarity)
+    direction = _corrected_direction(at, solver, centring * complementarity, ties)
 
-    primal_step, primal = _primal_step(correlation, at, direction)
+    primal_step, primal = _primal_step(correlation, at, direction, ties)
     dual_step, dual = _dual_step(at, direction)
     return _Iterate(
         s=s + primal_step * direction.s,
@@ -167,21 +206,23 @@ def _advance(correlation: np.ndarray, at: _Iterate) -> _Iterate:
     )
 
 
-def _corrected_direction(at: _Iterate, solver: ScaledSolver, target: float) -> _Direction:
+def _corrected_direction(
+    at: _Iterate, solver: ScaledSolver, target: float, ties: Ties
+) -> _Direction:
     """Predictor (mu = 0), then the step to ``target`` with the predictor's second-order terms."""
     s, upper_slack, inverse = at.s, 1.0 - at.s, at.inverse
-    diagonal = np.diagonal(inverse)
-    first = solver.solve(np.ones(len(s)))
-    second = symmetrize((at.dual * first) @ inverse)
+    diagonal = ties.pooled(np.diagonal(inverse))
+    first = solver.solve(ties.size)
+    second = symmetrize((at.dual * ties.spread(first)) @ inverse)
     second -= at.dual
-    second *= first
+    second *= ties.spread(first)
     lower = (at.lower + (at.lower / s) * first) * first / s
     upper = (-at.upper + (at.upper / upper_slack) * first) * first / upper_slack
-    correction = np.einsum("ij,ij->i", second, inverse) - lower + upper
-    right_side = 1.0 - target * (diagonal - 1.0 / s + 1.0 / upper_slack) - correction
+    correction = ties.pooled(np.einsum("ij,ij->i", second, inverse)) - lower + upper
+    right_side = ties.size - target * (diagonal - 1.0 / s + 1.0 / upper_slack) - correction
     x = solver.solve(right_side)
 
-    second += at.dual * x
+    second += at.dual * ties.spread(x)
     dual = symmetrize(second @ inverse)
     dual -= at.dual
     dual += target * inverse
@@ -200,17 +241,17 @@ def _to_boundary(values: np.ndarray, change: np.ndarray) -> float:
 
 
 def _primal_step(
-    correlation: np.ndarray, at: _Iterate, direction: _Direction
+    correlation: np.ndarray, at: _Iterate, direction: _Direction, ties: Ties
 ) -> tuple[float, tuple[np.ndarray, np.ndarray]]:
     """Step length in s, with the slack it leads to and its factor."""
     step = min(
         _to_boundary(at.s, direction.s),
         _to_boundary(1.0 - at.s, -direction.s),
-        largest_step(at.slack_factor, direction.s),
+        largest_step(at.slack_factor, ties.spread(direction.s)),
     )
     step = min(1.0, _FRACTION * step)
     while step > _SHORTEST:
-        slack = add_diagonal(2.0 * correlation, -(at.s + step * direction.s))
+        slack = add_diagonal(2.0 * correlation, -ties.spread(at.s + step * direction.s))
         factor = cholesky(slack)
         if factor is not None:
             return step, (slack, factor)

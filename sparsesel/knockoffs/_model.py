@@ -28,6 +28,9 @@ UNCHECKED = "can't be checked from the data"
 
 Assumptions = tuple[tuple[str, str, str], ...]
 
+# Columns of at most this many values are not called Gaussian.
+FEW_VALUES = 10
+
 # Rounding, relative: of a constant column, and of what regression leaves of a determined one.
 _CONSTANT = {np.dtype(np.float32): 1e-5, np.dtype(np.float64): 1e-10}
 _DETERMINED = {np.dtype(np.float32): 1e-4, np.dtype(np.float64): 1e-7}
@@ -96,6 +99,7 @@ class FeatureModel(Protocol):
         *,
         covariates: np.ndarray | None = None,
         sample_weight: np.ndarray | None = None,
+        feature_groups: np.ndarray | None = None,
     ) -> FittedModel:
         """Fit the model to the rows of X."""
 
@@ -153,8 +157,17 @@ def as_weights(sample_weight: np.ndarray | None, n_rows: int) -> np.ndarray:
     return weights / weights.sum()
 
 
-def condition(X: np.ndarray, covariates: np.ndarray, weights: np.ndarray) -> Conditioning:
-    """Find the features that are copied and regress them on what is conditioned on."""
+def condition(
+    X: np.ndarray,
+    covariates: np.ndarray,
+    weights: np.ndarray,
+    feature_groups: np.ndarray | None = None,
+) -> Conditioning:
+    """Find the features that are copied and regress them on what is conditioned on.
+
+    Features that repeat one another inside one group are copied: the group is told apart as a
+    whole.
+    """
     n_features = X.shape[1]
     seen = weights > 0
     X, covariates, weights = X[seen], covariates[seen], weights[seen]
@@ -171,13 +184,16 @@ def condition(X: np.ndarray, covariates: np.ndarray, weights: np.ndarray) -> Con
             "intercept and covariates; at least two more rows than these are needed. Give fewer "
             "covariates or more rows."
         )
-    _, spread = _regress(X, fixed, root)
+    _, spread = regression(X, fixed, root)
     free = varying & (spread > _DETERMINED[precision] * deviation)
     notes += _noted("determined by the covariates", varying & ~free)
 
-    residuals = X - fixed @ _regress(X, fixed, root)[0]
+    residuals = X - fixed @ regression(X, fixed, root)[0]
     groups = repeated_columns(residuals[:, free] * (root / spread[free]), precision)
     positions = np.flatnonzero(free)
+    if feature_groups is not None:
+        labels = np.asarray(feature_groups)[positions]
+        groups = [group for group in groups if len(set(labels[list(group)])) > 1]
     repeated = np.array([positions[group[0]] for group in groups], dtype=np.intp)
     members = np.zeros(n_features, dtype=bool)
     for group in groups:
@@ -185,7 +201,7 @@ def condition(X: np.ndarray, covariates: np.ndarray, weights: np.ndarray) -> Con
     notes += _noted("repeating one another", members)
 
     fixed = np.column_stack([fixed, X[:, repeated]])
-    coefficients, left = _regress(X, fixed, root)
+    coefficients, left = regression(X, fixed, root)
     has_copy = free & ~members & (left > _DETERMINED[precision] * deviation)
     return Conditioning(has_copy, repeated, coefficients[:, has_copy], left[has_copy], tuple(notes))
 
@@ -196,7 +212,7 @@ def _deviations(X: np.ndarray, weights: np.ndarray) -> np.ndarray:
     return np.sqrt(weights @ (X - mean) ** 2)
 
 
-def _regress(X: np.ndarray, fixed: np.ndarray, root: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def regression(X: np.ndarray, fixed: np.ndarray, root: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Weighted least-squares coefficients and standard deviations about the fit."""
     centre = X.mean(axis=0, dtype=np.float64)
     coefficients = np.linalg.lstsq(fixed * root, (X - centre) * root, rcond=1e-12)[0]
@@ -228,6 +244,16 @@ def repeated_columns(standardized: np.ndarray, precision: np.dtype) -> Sequence[
         else:
             groups.append([int(before), int(after)])
     return sorted(tuple(sorted(group)) for group in groups)
+
+
+def count_few_valued(X: np.ndarray, columns: np.ndarray) -> int:
+    """How many of the columns (positions) take at most ten values.
+
+    The first rows rule out nearly all others without sorting whole columns.
+    """
+    start = X[:200]
+    suspects = [j for j in columns if len(np.unique(start[:, j])) <= FEW_VALUES]
+    return sum(len(np.unique(X[:, j])) <= FEW_VALUES for j in suspects)
 
 
 def _noted(what: str, mask: np.ndarray) -> list[str]:

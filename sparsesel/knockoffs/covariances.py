@@ -41,6 +41,11 @@ def variances(covariance: Covariance) -> np.ndarray:
     return np.diagonal(covariance).copy()
 
 
+def dense(covariance: Covariance) -> np.ndarray:
+    """The matrix itself."""
+    return covariance.dense() if isinstance(covariance, LowRankCovariance) else covariance
+
+
 def scaled(covariance: Covariance, scale: np.ndarray) -> Covariance:
     """The covariance after each feature is multiplied by its entry of ``scale``."""
     if isinstance(covariance, LowRankCovariance):
@@ -126,9 +131,22 @@ def number_of_factors(rows: np.ndarray) -> int:
     return int(np.argmax(padded[: most + 1] / np.maximum(padded[1 : most + 2], tiny)))
 
 
-ESTIMATORS: dict[str, Callable[[np.ndarray], Covariance]] = {
+Estimator = Callable[[np.ndarray], Covariance]
+
+ESTIMATORS: dict[str, Estimator] = {
     "ledoit_wolf": ledoit_wolf,
     "oas": oas,
     "graphical_lasso": graphical_lasso,
     "factor": factor,
 }
+
+
+def estimator(name: str) -> Estimator:
+    """The estimate of a name; an unknown name is an error that lists them."""
+    if name not in ESTIMATORS:
+        raise ValueError(
+            f"The covariance estimate {name!r} is unknown; allowed are "
+            f"{', '.join(map(repr, ESTIMATORS))}, or, in GaussianModel, a covariance matrix. "
+            "'ledoit_wolf' suits most tables."
+        )
+    return ESTIMATORS[name]

@@ -90,6 +90,7 @@ class FixedXModel:
         *,
         covariates: np.ndarray | None = None,
         sample_weight: np.ndarray | None = None,
+        feature_groups: np.ndarray | None = None,
     ) -> FittedFixedX:
         """Project the features, find their s-vector and prepare the copies.
 
@@ -101,6 +102,8 @@ class FixedXModel:
             Columns that are in every regression.
         sample_weight : ndarray of shape (n_rows,), default=None
             Weights of the rows.
+        feature_groups : ndarray of shape (n_features,), default=None
+            Labels of groups that are told from their copies as a whole.
 
         Returns
         -------
@@ -114,7 +117,7 @@ class FixedXModel:
         """
         Z = as_covariates(covariates, len(X))
         weights = as_weights(sample_weight, len(X))
-        conditioning = condition(X, Z, weights)
+        conditioning = condition(X, Z, weights, feature_groups)
         seen, has_copy = weights > 0, conditioning.has_copy
         root = np.sqrt(weights[seen] * seen.sum())[:, None]
         fixed = np.column_stack([np.ones(len(X)), Z, X[:, conditioning.repeated]])
@@ -130,9 +133,12 @@ class FixedXModel:
         draws = None
         if has_copy.any():
             correlation = (left / length).T @ (left / length)
-            solution = solve_s_vector(correlation, self.s_vector)
+            labels = None
+            if feature_groups is not None:
+                labels = np.asarray(feature_groups)[has_copy]
+            solution = solve_s_vector(correlation, self.s_vector, feature_groups=labels)
             _check_rank(solution.shrinkage)
-            draws = DenseDraws.prepare(correlation, solution.s)
+            draws = DenseDraws.prepare(correlation, solution.S)
         s[has_copy] = solution.s
         own = np.linalg.qr(left)[0]
         projected = _Projected(basis, explained, left / length, own, length, root, seen, draws)

@@ -18,6 +18,7 @@ import numpy as np
 
 from sparsesel.knockoffs._gaussian_draws import DenseDraws, LowRankDraws, safe_root
 from sparsesel.knockoffs._model import (
+    FEW_VALUES,
     HOLDS,
     UNCHECKED,
     VIOLATED,
@@ -27,9 +28,18 @@ from sparsesel.knockoffs._model import (
     as_covariates,
     as_weights,
     condition,
+    count_few_valued,
     pair,
 )
-from sparsesel.knockoffs.covariances import ESTIMATORS, Covariance, scaled, subset, variances
+from sparsesel.knockoffs.covariances import (
+    Covariance,
+    Estimator,
+    dense,
+    estimator,
+    scaled,
+    subset,
+    variances,
+)
 from sparsesel.knockoffs.low_rank import LowRankCovariance, capacitance
 from sparsesel.knockoffs.s_vectors import (
     SVector,
@@ -94,6 +104,7 @@ LowRankCovariance, default="ledoit_wolf"
         *,
         covariates: np.ndarray | None = None,
         sample_weight: np.ndarray | None = None,
+        feature_groups: np.ndarray | None = None,
     ) -> FittedGaussian:
         """Fit the model to the rows of X.
 
@@ -105,6 +116,8 @@ LowRankCovariance, default="ledoit_wolf"
             Columns that are conditioned on.
         sample_weight : ndarray of shape (n_rows,), default=None
             Weights of the rows in the estimates.
+        feature_groups : ndarray of shape (n_features,), default=None
+            Labels of groups that are told from their copies as a whole.
 
         Returns
         -------
@@ -120,10 +133,15 @@ LowRankCovariance, default="ledoit_wolf"
         Z = as_covariates(covariates, len(X))
         weights = as_weights(sample_weight, len(X))
         if isinstance(self.covariance, str):
-            conditioning, covariance = _estimated(self.covariance, X, Z, weights)
+            conditioning = condition(X, Z, weights, feature_groups)
+            covariance_of = estimator(self.covariance)
+            conditioning, covariance = _estimated(covariance_of, conditioning, X, Z, weights)
         else:
             conditioning, covariance = self._given(X, Z, weights)
-        return _fitted(self, conditioning, covariance, int((weights > 0).sum()))
+        n_rows = int((weights > 0).sum())
+        fitted = fitted_gaussian(self, conditioning, covariance, n_rows, feature_groups)
+        few = count_few_valued(X[weights > 0], np.flatnonzero(fitted.has_copy))
+        return replace(fitted, n_few_valued=few)
 
     def _given(
         self, X: np.ndarray, Z: np.ndarray, weights: np.ndarray
@@ -151,7 +169,7 @@ LowRankCovariance, default="ledoit_wolf"
         coefficients = np.vstack([intercept, slopes])[:, has_copy]
         scale = np.ones(int(has_copy.sum()))
         conditioning = Conditioning(has_copy, np.empty(0, dtype=np.intp), coefficients, scale)
-        return _standardized(conditioning, subset(covariance, has_copy))
+        return standardized(conditioning, subset(covariance, has_copy))
 
 
 @dataclass(frozen=True)
@@ -166,6 +184,8 @@ class FittedGaussian:
         Which features have a copy of their own.
     solution : SVector
         The s-vector of the copied features with its certified gap and shrinkage.
+    n_few_valued : int
+        Copied features that take at most ten values.
     """
 
     settings: GaussianModel
@@ -173,8 +193,9 @@ class FittedGaussian:
     has_copy: np.ndarray
     solution: SVector
     n_rows: int
-    _conditioning: Conditioning
+    conditioning: Conditioning
     _draws: DenseDraws | LowRankDraws | None
+    n_few_valued: int = 0
 
     def sample(
         self,
@@ -203,9 +224,9 @@ class FittedGaussian:
         copies = np.array(X, dtype=kind)
         if self._draws is not None:
             Z = as_covariates(covariates, len(X))
-            drawn = self._draws.draw(self._conditioning.residuals(X, Z), generator)
-            centre = self._conditioning.centre(X, Z)
-            copies[:, self.has_copy] = centre + drawn * self._conditioning.scale
+            drawn = self._draws.draw(self.conditioning.residuals(X, Z), generator)
+            centre = self.conditioning.centre(X, Z)
+            copies[:, self.has_copy] = centre + drawn * self.conditioning.scale
         return copies
 
     def draw(
@@ -224,10 +245,12 @@ class FittedGaussian:
     def assumptions(self) -> Assumptions:
         """What the model assumes: (statement, state, detail) each."""
         size = int(self.has_copy.sum())
+        few = self.n_few_valued
+        notes = [f"{few} take at most {FEW_VALUES} values, CopulaModel is for these"] if few else []
         gaussian = (
             "the features are jointly Gaussian given the covariates",
-            UNCHECKED,
-            "; ".join(self._conditioning.notes),
+            VIOLATED if few else UNCHECKED,
+            "; ".join([*notes, *self.conditioning.notes]),
         )
         if not isinstance(self.settings.covariance, str):
             known = ("the covariance given is that of the features", UNCHECKED, "")
@@ -245,22 +268,19 @@ class FittedGaussian:
 
 
 def _estimated(
-    estimate: str, X: np.ndarray, Z: np.ndarray, weights: np.ndarray
+    covariance_of: Estimator,
+    conditioning: Conditioning,
+    X: np.ndarray,
+    Z: np.ndarray,
+    weights: np.ndarray,
 ) -> tuple[Conditioning, Covariance]:
-    """Conditioning and correlation matrix from the rows of positive weight."""
-    if estimate not in ESTIMATORS:
-        raise ValueError(
-            f"The covariance estimate {estimate!r} is unknown; allowed are "
-            f"{', '.join(map(repr, ESTIMATORS))}, or a covariance matrix. 'ledoit_wolf' suits "
-            "most tables."
-        )
-    conditioning = condition(X, Z, weights)
+    """Correlation matrix from the rows of positive weight."""
     if not conditioning.has_copy.any():
         return conditioning, np.empty((0, 0))
     seen = weights > 0
     root = np.sqrt(weights[seen] * seen.sum())[:, None]
     rows = conditioning.residuals(X[seen], Z[seen]) * root
-    return _standardized(conditioning, ESTIMATORS[estimate](rows))
+    return standardized(conditioning, covariance_of(rows))
 
 
 def _nearly_singular(solution: SVector) -> Assumptions:
@@ -271,13 +291,17 @@ def _nearly_singular(solution: SVector) -> Assumptions:
             "the correlation matrix is not singular",
             VIOLATED,
             f"the identity was mixed in with weight {solution.shrinkage:.1e}; features that others "
-            "determine have no power",
+            "determine have no power, unless they share a group",
         ),
     )
 
 
-def _fitted(
-    settings: GaussianModel, conditioning: Conditioning, covariance: Covariance, n_rows: int
+def fitted_gaussian(
+    settings: GaussianModel,
+    conditioning: Conditioning,
+    covariance: Covariance,
+    n_rows: int,
+    feature_groups: np.ndarray | None = None,
 ) -> FittedGaussian:
     """Find the s-vector and prepare the draws; the covariance has unit diagonal."""
     has_copy = conditioning.has_copy
@@ -285,24 +309,31 @@ def _fitted(
     solution = SVector(s[has_copy], settings.s_vector, 0.0, 0, SVectorStatus.CONVERGED, 0.0)
     draws: DenseDraws | LowRankDraws | None = None
     if has_copy.any():
+        labels = None
+        if feature_groups is not None:
+            labels = np.asarray(feature_groups)[has_copy]
+            covariance = dense(covariance)
         covariance, shrinkage = well_conditioned(covariance)
-        solution = replace(_solution(covariance, settings.s_vector), shrinkage=shrinkage)
+        solution = _solution(covariance, settings.s_vector, labels)
+        solution = replace(solution, shrinkage=shrinkage)
         if isinstance(covariance, LowRankCovariance):
             draws = LowRankDraws.prepare(covariance, solution.s)
         else:
-            draws = DenseDraws.prepare(covariance, solution.s)
+            draws = DenseDraws.prepare(covariance, solution.S)
         s[has_copy] = solution.s
     return FittedGaussian(settings, s, has_copy, solution, n_rows, conditioning, draws)
 
 
-def _solution(covariance: Covariance, method: str) -> SVector:
+def _solution(covariance: Covariance, method: str, labels: np.ndarray | None) -> SVector:
+    if labels is not None:
+        return solve_s_vector(covariance, method, feature_groups=labels)
     if isinstance(covariance, LowRankCovariance) or len(covariance) <= LARGEST_DENSE:
         return solve_s_vector(covariance, method)
     s = block_diagonal_s_vector(covariance, method)
     return SVector(s, method, np.inf, 0, SVectorStatus.IN_BLOCKS, 0.0)
 
 
-def _standardized(
+def standardized(
     conditioning: Conditioning, covariance: Covariance
 ) -> tuple[Conditioning, Covariance]:
     """Move what is left of the variances from the covariance into the scale."""

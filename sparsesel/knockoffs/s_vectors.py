@@ -49,6 +49,7 @@ from sparsesel.knockoffs._newton import (
     SolverResult,
     minimize_smooth,
 )
+from sparsesel.knockoffs.group_s import solve_groups
 from sparsesel.knockoffs.low_rank import LowRankCovariance, negative_eigenvalues
 
 __all__ = [
@@ -67,6 +68,9 @@ S_VECTOR_METHODS = ("mvr", "max_entropy", "sdp", "equicorrelated")
 SMALLEST_EIGENVALUE = 1e-8
 
 _TOL = {"sdp": 1e-6, "mvr": 1e-10, "max_entropy": 1e-10, "equicorrelated": 0.0}
+
+# S of groups is a dense matrix, found in O(n_features^3) a sweep.
+LARGEST_WITH_GROUPS = 5000
 
 # Up to this many features a diagonal-plus-low-rank matrix is solved as a dense one.
 _DENSE_ALWAYS = 500
@@ -103,6 +107,8 @@ class SVector:
     shrinkage : float
         The weight of the identity that was mixed into a nearly singular correlation matrix, 0 where
         none was needed.  The s-vector is valid for the mixed matrix.
+    matrix : ndarray of shape (n_features, n_features) or None
+        With feature groups, the block-diagonal S whose diagonal is ``s``.
     """
 
     s: np.ndarray
@@ -111,6 +117,12 @@ class SVector:
     n_iter: int
     status: SVectorStatus
     shrinkage: float
+    matrix: np.ndarray | None = None
+
+    @property
+    def S(self) -> np.ndarray:
+        """What moves the copies: the matrix with groups, the vector without."""
+        return self.s if self.matrix is None else self.matrix
 
 
 def s_vector(covariance: np.ndarray | LowRankCovariance, method: str = "mvr") -> np.ndarray:
@@ -153,6 +165,7 @@ def solve_s_vector(
     covariance: np.ndarray | LowRankCovariance,
     method: str = "mvr",
     *,
+    feature_groups: np.ndarray | None = None,
     tol: float | None = None,
     max_iter: int = 100,
 ) -> SVector:
@@ -164,6 +177,8 @@ def solve_s_vector(
         Covariance or correlation matrix.
     method : {"mvr", "max_entropy", "sdp", "equicorrelated"}, default="mvr"
         The rule, see the module.
+    feature_groups : array-like of shape (n_features,), default=None
+        Labels of groups that are told from their copies as a whole: S is then block-diagonal.
     tol : float, default=None
         Largest certified gap, above 0.  None: 1e-6 for "sdp", and 1e-10 for "mvr" and
         "max_entropy", whose gap is the square of the error in s.
@@ -194,24 +209,64 @@ def solve_s_vector(
             f"{', '.join(map(repr, S_VECTOR_METHODS))}. 'mvr' is the usual choice."
         )
     tol = _TOL[method] if tol is None else tol
-    if isinstance(covariance, LowRankCovariance):
-        variances = covariance.variances
-        if covariance.n_features > _DENSE_ALWAYS:
-            correlation = covariance.scaled(1.0 / np.sqrt(variances))
-            solution = _solve_low_rank(correlation, method, tol, max_iter)
-            return replace(solution, s=solution.s * variances)
-        covariance = covariance.dense()
-    matrix = _checked(covariance)
-    variances = np.diagonal(matrix).copy()
+    if feature_groups is not None:
+        return _solve_groups(covariance, method, np.asarray(feature_groups), tol, max_iter)
+    if isinstance(covariance, LowRankCovariance) and covariance.n_features > _DENSE_ALWAYS:
+        correlation = covariance.scaled(1.0 / np.sqrt(covariance.variances))
+        solution = _solve_low_rank(correlation, method, tol, max_iter)
+        return replace(solution, s=solution.s * covariance.variances)
+    matrix = _checked(_dense(covariance))
+    variances = np.diagonal(matrix)
     varying = variances > 0
     s = np.zeros(len(variances))
     if not varying.any():
         return SVector(s, method, 0.0, 0, SVectorStatus.CONVERGED, 0.0)
-    scale = 1.0 / np.sqrt(variances[varying])
-    correlation = matrix[np.ix_(varying, varying)] * scale * scale[:, None]
-    solution = _solve_dense(correlation, method, tol, max_iter)
+    solution = _solve_dense(_to_correlation(matrix, varying), method, tol, max_iter)
     s[varying] = solution.s * variances[varying]
     return replace(solution, s=s)
+
+
+def _dense(covariance: np.ndarray | LowRankCovariance) -> np.ndarray:
+    return covariance.dense() if isinstance(covariance, LowRankCovariance) else covariance
+
+
+def _to_correlation(covariance: np.ndarray, varying: np.ndarray) -> np.ndarray:
+    """Correlation matrix of the features that vary."""
+    scale = 1.0 / np.sqrt(np.diagonal(covariance)[varying])
+    return covariance[np.ix_(varying, varying)] * scale * scale[:, None]
+
+
+def _solve_groups(
+    covariance: np.ndarray | LowRankCovariance,
+    method: str,
+    labels: np.ndarray,
+    tol: float,
+    max_iter: int,
+) -> SVector:
+    """The block-diagonal S, on the scale of the covariance."""
+    if labels.shape != covariance.shape[:1] or covariance.shape[0] > LARGEST_WITH_GROUPS:
+        raise ValueError(
+            f"{labels.shape} labels of groups were given for {covariance.shape[0]} features; one "
+            f"label per feature is needed, for at most {LARGEST_WITH_GROUPS} features. For more, "
+            "keep one feature of each group, or leave the groups out."
+        )
+    matrix = _checked(_dense(covariance))
+    varying = np.diagonal(matrix) > 0
+    S = np.zeros_like(matrix)
+    solution = SVector(np.diagonal(S), method, 0.0, 0, SVectorStatus.CONVERGED, 0.0, S)
+    if not varying.any():
+        return solution
+    correlation, shrinkage = well_conditioned(_to_correlation(matrix, varying))
+    assert isinstance(correlation, np.ndarray)
+    codes = np.unique(labels[varying], return_inverse=True)[1]
+    result = solve_groups(correlation, codes, method, tol=tol, max_iter=max_iter)
+    blocks, slack = result.matrix, 1e-13
+    while not _is_definite(correlation, blocks):
+        blocks, slack = result.matrix * (1.0 - slack), 4.0 * slack
+    scale = np.sqrt(np.diagonal(matrix)[varying])
+    S[np.ix_(varying, varying)] = blocks * scale * scale[:, None]
+    status = _status(result.gap, tol)
+    return SVector(np.diagonal(S).copy(), method, result.gap, result.n_iter, status, shrinkage, S)
 
 
 def block_diagonal_s_vector(
@@ -371,7 +426,8 @@ def well_conditioned(
 def _is_definite(correlation: np.ndarray, s: np.ndarray) -> bool:
     """Whether 2 Sigma - S is positive definite beyond the backward error of Cholesky."""
     rounding = 4.0 * len(s) * np.finfo(np.float64).eps
-    return cholesky(add_diagonal(2.0 * correlation, -s - rounding), overwrite=True) is not None
+    slack = 2.0 * correlation - s if s.ndim == 2 else add_diagonal(2.0 * correlation, -s)
+    return cholesky(add_diagonal(slack, -rounding), overwrite=True) is not None
 
 
 def _solve_dense(given: np.ndarray, method: str, tol: float, max_iter: int) -> SVector:
@@ -410,5 +466,9 @@ def _solve_low_rank(
 
 
 def _reported(result: SolverResult, method: str, tol: float, shrinkage: float) -> SVector:
-    status = SVectorStatus.CONVERGED if result.gap <= tol else SVectorStatus.NOT_CONVERGED
+    status = _status(result.gap, tol)
     return SVector(result.s, method, result.gap, result.n_iter, status, shrinkage)
+
+
+def _status(gap: float, tol: float) -> SVectorStatus:
+    return SVectorStatus.CONVERGED if gap <= tol else SVectorStatus.NOT_CONVERGED

@@ -25,7 +25,7 @@ from sklearn.utils.validation import check_array, check_is_fitted, validate_data
 
 from sparsesel._sklearn_compat import HasMethods, StrOptions, configured_container
 from sparsesel.claim import Claim
-from sparsesel.engine import Problems
+from sparsesel.engine import ENGINE_FORMAT, Problems
 from sparsesel.selectors._columns import Columns, Table, resolve_columns
 from sparsesel.tasks import TaskSettings, draw_seed, fingerprint
 
@@ -274,7 +274,7 @@ class BaseSparseSelector(SelectorMixin, BaseEstimator):
             name = fingerprint(
                 type(self).__name__,
                 (data.X, data.response, data.weights, data.groups, data.columns, data.seed),
-                (data.loss, self.standardize, *parts),
+                (data.loss, self.standardize, ENGINE_FORMAT, *parts),
             )
         return TaskSettings(
             n_jobs=self.n_jobs,
@@ -372,8 +372,8 @@ class BaseSparseSelector(SelectorMixin, BaseEstimator):
         validate_data(self, X, reset=False, skip_check_array=True)
         support = self.get_support()
         if not support.any():
-            self._transform(np.empty((1, self.n_features_in_)))  # for scikit-learn's warning
-        # Dropping keeps the number of rows where no column is left; selecting none does not.
+            # A frame that lost its last column may have lost its rows too; an array has not.
+            return self._transform(np.broadcast_to(0.0, X.shape))
         kept = X.drop([name for name, keep in zip(X.columns, support, strict=True) if not keep])
         if configured_container(self) == "polars":
             return kept

@@ -24,7 +24,7 @@ import difflib
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from numbers import Integral
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -36,6 +36,9 @@ from scipy.spatial.distance import squareform
 # Columns of one block of correlations: wide enough for matrix products at full speed, while a
 # block against 20,000 columns stays under 100 MB.
 _BLOCK = 512
+
+# Names of a cluster list this many of its columns, and count the others.
+_MEMBERS_SHOWN = 3
 
 _KEEP_NAMES = (
     "To keep names through earlier steps of a Pipeline, give those steps "
@@ -387,8 +390,18 @@ def _number_units(
     return unit_of, tuple(titles)
 
 
+class _Cluster(NamedTuple):
+    """Label of a cluster: told apart by its first column, since names may repeat."""
+
+    first: int
+    title: str
+
+    def __str__(self) -> str:
+        return self.title
+
+
 def _correlation_labels(table: Table, candidates: NDArray[np.bool_]) -> list[Any]:
-    """Clusters of correlated candidates, named by their first column and the number of others."""
+    """Clusters of correlated candidates."""
     positions = np.flatnonzero(candidates)
     clusters = correlation_groups(
         table.validated, sample_weight=table.sample_weight, columns=positions
@@ -396,8 +409,11 @@ def _correlation_labels(table: Table, candidates: NDArray[np.bool_]) -> list[Any
     labels: list[Any] = [None] * table.n_columns
     for cluster in np.flatnonzero(np.bincount(clusters) > 1):
         members = positions[clusters == cluster]
+        shown = " + ".join(str(name) for name in table.names[members[:_MEMBERS_SHOWN]])
+        hidden = len(members) - _MEMBERS_SHOWN
+        title = f"{shown} + {hidden} more" if hidden > 0 else shown
         for j in members:
-            labels[j] = f"{table.names[members[0]]} +{len(members) - 1}"
+            labels[j] = _Cluster(int(members[0]), title)
     return labels
 
 

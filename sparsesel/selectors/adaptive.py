@@ -131,6 +131,8 @@ class AdaptiveLassoSelector(BaseSparseSelector):
     Attributes
     ----------
     <common attributes>
+        Here the measure is "coefficient_size", the largest |coefficient| of the unit's columns in
+        units of their standard deviations; the claim lists units in its order.
     coef_ : ndarray of shape (p,)
         Coefficients, in the units of X.
     intercept_ : float
@@ -297,8 +299,10 @@ class AdaptiveLassoSelector(BaseSparseSelector):
             self.__dict__.pop(name, None)
         for name, curve in chosen.curves.items():
             setattr(self, name, curve)
+        sizes = _unit_sizes(data, design, self.coef_)
         selected = data.columns.any_over_units(self.coef_ != 0)
-        self._conclude(data, selected, {}, self._claim(data, selected, len(held_out)))
+        claim = self._claim(data, selected, sizes, len(held_out))
+        self._conclude(data, selected, {"coefficient_size": sizes}, claim)
         return self
 
     def _initial(self, data: FitInput, weights: FloatArray) -> str:
@@ -399,8 +403,11 @@ class AdaptiveLassoSelector(BaseSparseSelector):
         _check_folds(data, held_out)
         return held_out
 
-    def _claim(self, data: FitInput, selected: NDArray[np.bool_], n_folds: int) -> Claim:
-        names = tuple(np.array(data.columns.unit_names, dtype=object)[selected])
+    def _claim(
+        self, data: FitInput, selected: NDArray[np.bool_], sizes: FloatArray, n_folds: int
+    ) -> Claim:
+        order = np.argsort(-sizes, kind="stable")
+        names = tuple(data.columns.unit_names[k] for k in order if selected[k])
         rule = _RULES.get(self.alpha) if isinstance(self.alpha, str) else None
         how = "as given" if rule is None else f"chosen by {rule}"
         notes = [f"The penalty is alpha = {self.alpha_:.4g}, {how}."]
@@ -529,6 +536,17 @@ def adaptive_weights(sizes: FloatArray, gamma: float) -> FloatArray:
     largest = sizes.max(axis=1, keepdims=True)
     ratio = np.divide(largest, sizes, out=np.full_like(sizes, np.inf), where=sizes > 0)
     return ratio**gamma
+
+
+def _unit_sizes(data: FitInput, design: DesignMatrix, coef: FloatArray) -> FloatArray:
+    """Largest |coefficient| of every unit's columns, in their standard deviations."""
+    used = np.flatnonzero((coef != 0) & data.columns.candidates)
+    weight = data.weights / data.weights.sum()
+    columns = design.gather(used, centred=True)
+    deviation = np.sqrt(np.maximum(columns**2 @ weight - (columns @ weight) ** 2, 0.0))
+    sizes = np.zeros(data.columns.n_units)
+    np.maximum.at(sizes, data.columns.unit_of[used], np.abs(coef[used]) * deviation)
+    return sizes
 
 
 def _lowest_mean(loss_path: FloatArray) -> int:

@@ -231,8 +231,8 @@ class _HalfSampleSelector(BaseSparseSelector):
 
     def _vote(self, data: FitInput, halves: NDArray[np.bool_], q: int) -> _Votes:
         """Let every half pick its first q units, by the engine."""
-        bank = _EntryBank(self, data, halves)
-        result = bank.solve(Keep(entries=q, entry_units=data.columns.unit_of), q)
+        bank = _EntryBank.of(self, data, halves)
+        result = bank.solve(Keep(entries=q, entry_units=data.columns.unit_of))
         assert result.entry_order is not None
         return _Votes(result.entry_order, int(result.n_iter.max()))
 
@@ -288,10 +288,10 @@ class _HalfSampleSelector(BaseSparseSelector):
         """The problem of every half at the last penalty of its path."""
         data = self._read(X, y, sample_weight, groups, self.seed_, reset=False)
         halves = self._halves(data)
-        bank = _EntryBank(self, data, halves)
+        bank = _EntryBank.of(self, data, halves)
         q = self.features_per_fit_
         keep = Keep(coefficients=True, entries=q, entry_units=data.columns.unit_of)
-        result = bank.solve(keep, q)
+        result = bank.solve(keep)
         assert result.entry_order is not None and result.coef is not None
         if not np.array_equal(result.entry_order, self._picks):
             raise ValueError(
@@ -321,10 +321,16 @@ class _EntryBank:
     selector: _HalfSampleSelector
     data: FitInput
     halves: NDArray[np.bool_]
+    factors: FloatArray  # penalty weights, (p,) or (2B, p)
+
+    @staticmethod
+    def of(selector: _HalfSampleSelector, data: FitInput, halves: NDArray[np.bool_]) -> _EntryBank:
+        """The bank of a selector's halves."""
+        return _EntryBank(selector, data, halves, selector._factors(data, len(halves)))
 
     def problems(self, part: slice = slice(None)) -> Problems:
         """The problems of some halves."""
-        factors = self.selector._factors(self.data, len(self.halves))
+        factors = self.factors
         return Problems(
             loss=self.data.loss,
             response=self.data.response,
@@ -334,8 +340,8 @@ class _EntryBank:
             standardize=self.selector.standardize,
         )
 
-    def solve(self, keep: Keep, q: int) -> BankResult:
-        """The paths of all halves, each until q units have entered."""
+    def solve(self, keep: Keep) -> BankResult:
+        """The paths of all halves, each until as many units have entered as are kept."""
         selector = self.selector
         problems = self.problems()
         settings = selector._settings(
