@@ -195,8 +195,9 @@ def open_chunk(
     norms = deviation if problems.fit_intercept else np.hypot(moments.mean, deviation)
     order_one, n_left_out = _first_order(design, penalty, deviation, problems.standardize)
     order_two = order_one
-    if problems.l1_ratio < 1.0:
-        order_two = order_one * deviation if problems.standardize else order_one
+    if problems.l1_ratio < 1.0 and problems.standardize:
+        order_two = np.where(np.isinf(order_one), np.inf, deviation)
+        np.multiply(order_two, order_one, out=order_two, where=np.isfinite(order_one))
     basis = unpenalised_basis(design, weights, order_one == 0.0, problems.fit_intercept)
     chunk = Chunk(
         design=design,
