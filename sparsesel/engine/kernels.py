@@ -45,7 +45,7 @@ _NEWTON_STEPS = 10
 _DIRECT = 250
 _CONJUGATE_STEPS, _CONJUGATE_REST = 60, 1e-3
 # Relative lift of the diagonal that keeps the factorisation of a singular support alive.
-_LIFT = 1e-12
+_LIFT = 1e-9
 # Log loss: floor of the curvature p (1 - p), and the score at which the unpenalised
 # coordinates count as solved.
 _CURVATURE_FLOOR = 1e-10
@@ -357,17 +357,17 @@ def _support_newton(size, gram, gradient, coef, l1, l2, chosen, factor, step, im
     Coefficients that would change their sign stop at zero, if the objective then falls;
     else the step is cut where the first of them would, along which the objective falls for
     certain, a convex quadratic inside an orthant whose minimum lies ahead.  Returns the
-    change of ||r||^2.
+    change of ||r||^2 and whether the last step reached its minimum.
     """
     change = 0.0
     for _ in range(_NEWTON_STEPS):
         count = _support(size, coef, chosen)
         if count == 0:
-            return change
+            return change, True
         if count > factor.shape[0]:
             _approach_support(chosen, count, gram, gradient, coef, l1, l2, step)
         elif not _solve_support(chosen, count, gram, gradient, coef, l1, l2, factor, step):
-            return change
+            return change, False
         length = 1.0
         first = -1
         for a in range(count):
@@ -397,8 +397,8 @@ def _support_newton(size, gram, gradient, coef, l1, l2, chosen, factor, step, im
         for k in range(size):
             gradient[k] -= image[k]
         if first < 0:
-            return change
-    return change
+            return change, True
+    return change, False
 
 
 @kernel
@@ -425,11 +425,12 @@ def descend(size, gram, gradient, coef, l1, l2, squared_norm, target, max_sweeps
         if cycle > _CYCLES_BEFORE_NEWTON:
             if factor.shape[0] == 0:
                 factor = np.empty((min(size, _DIRECT), min(size, _DIRECT)))
-            change = _support_newton(
+            change, arrived = _support_newton(
                 size, gram, gradient, coef, l1, l2, chosen, factor, step, image
             )
             squared_norm = max(squared_norm + change, 0.0)
-            continue
+            if arrived:
+                continue
         count = _support(size, coef, chosen)
         for _ in range(_SUPPORT_SWEEPS):
             change, largest = _sweep(chosen, count, size, gram, gradient, coef, l1, l2)
