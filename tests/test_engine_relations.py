@@ -355,6 +355,42 @@ def unfinished(*case, reason):
     return pytest.param(*case, marks=pytest.mark.xfail(strict=True, reason=reason))
 
 
+NEAR = "Newton steps cut at once where two columns nearly repeat take the place of sweeps"
+SPANNED = "a grid that starts at a gradient of rounding errors asks for more than doubles hold"
+
+
+class TestNearlySingularTables:
+    @pytest.mark.parametrize(
+        ("loss", "apart"),
+        [
+            *[("log_loss", apart) for apart in (1e-12, 1e-9)],
+            *[unfinished("squared_error", apart, reason=NEAR) for apart in (1e-12, 1e-9)],
+        ],
+    )
+    def test_columns_that_nearly_repeat_each_other(self, loss, apart):
+        """The second of a pair is of no use; plain descent takes under a thousand sweeps."""
+        rng = np.random.default_rng(29)
+        first = rng.standard_normal((74, 150))
+        X = np.hstack([first, first + apart * rng.standard_normal(first.shape)])
+        y = first[:, :10].sum(axis=1) + rng.standard_normal(74)
+        y = y if loss == "squared_error" else (y > 0).astype(float)
+        problem = Problem(X, y, loss)
+        alphas = largest_alpha(problem) * np.geomspace(1, 0.01, 10)
+        path = penalized_path(X, y, alphas=alphas, max_iter=1000, loss=loss)
+        solves(problem, alphas, *answers(path), tol=1e-7)
+
+    @pytest.mark.xfail(strict=True, reason=SPANNED)
+    @each_loss
+    def test_columns_that_unpenalised_ones_explain(self, loss):
+        problem = draw(loss, 35)
+        u = problem.X[:, 5]
+        X = np.outer(u, np.linspace(-3, 3, 20)) + np.linspace(0, 9, 20)
+        X[:, 5] = u
+        path = solve(replace(problem, X=X), 5)
+        assert np.all(path.status == Status.CONVERGED)
+        assert not answers(path)[0][:, np.arange(20) != 5].any()
+
+
 SMALL = "gradients kept in single precision vanish, and every column counts as bounded"
 LARGE = "a square that overflows makes the null objective or a scale infinite, and the gap zero"
 CAST = "numpy warns of the cast of kept gradients to single precision"

@@ -176,8 +176,8 @@ class CrossCheckReport:
         yield f"  cvxpy       solved {self.n_solved}" + (f" ({statuses})" if statuses else "")
         if self.solved:
             yield (
-                f"  objective   ours above the reference's by at most {self.largest_excess:.1e}; "
-                f"gap of the reference at most {self.largest_reference_gap:.1e}"
+                f"  objective   ours less the reference's: at most {self.largest_excess:.1e}; "
+                f"gap of the reference: at most {self.largest_reference_gap:.1e}"
             )
             yield (
                 f"  support     {self.n_differences} differences in {self.n_compared:,} columns "
