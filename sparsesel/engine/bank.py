@@ -220,6 +220,9 @@ def solve_bank(
         _Item(problems.part(chosen), _part(alphas, chosen), keep.part(chosen))
         for chosen in (slice(start, start + width) for start in range(0, problems.count, width))
     ]
+    if problems.sample_weight is not None:
+        counting = np.atleast_2d(problems.sample_weight).any(axis=0)
+        design = design.counting(counting)
     solve = functools.partial(_solve_chunk, design, options)
     return _joined(run_tasks(solve, items, settings))
 

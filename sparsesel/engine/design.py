@@ -4,7 +4,7 @@ A design answers four questions about X (n, p) and copies nothing of it but the 
 it is asked for:
 
 * ``correlate(V)``: V X for a block of row vectors V (B, n), in double;
-* ``centres``: the column means of the full table, in double;
+* ``centres``: the column means of the full table (of its rows that count), in double;
 * ``moments(W)``: for weights W (B, n) that sum to one per row, the weighted means m and
   standard deviations s of every column, two-pass about the table's centres c:
   d = W (X - c),  s^2 = W (X - c)^2 - d^2,  m = c + d.
@@ -50,10 +50,18 @@ class Moments:
 class DesignMatrix:
     """What the solvers ask of a table; see the module's head."""
 
-    def __init__(self, table: Any) -> None:
+    def __init__(self, table: Any, rows: NDArray[np.bool_] | None = None) -> None:
         self.table = table
+        self._rows = rows
         self.n_rows, self.n_columns = table.shape
         self.dtype = table.dtype
+
+    def counting(self, rows: NDArray[np.bool_]) -> DesignMatrix:
+        """The same table whose centres and largest values come from these rows only.
+
+        Rows without weight anywhere must have no influence, however large.
+        """
+        return self if rows.all() else type(self)(self.table, rows)
 
     @property
     def rounding(self) -> float:
@@ -99,6 +107,7 @@ class DesignMatrix:
         largest = np.empty(self.n_columns)
         for block in self._blocks():
             values = self._dense(block)
+            values = values if self._rows is None else values[self._rows]
             centres[block] = values.mean(axis=0)
             largest[block] = np.abs(values).max(axis=0)
         return centres, largest

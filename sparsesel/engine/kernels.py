@@ -78,6 +78,13 @@ def add_scaled(target, factor, values):
 
 
 @kernel
+def _copy(source, target, count):
+    """target[:count] = source[:count]; an assignment of slices takes long to compile."""
+    for i in range(count):
+        target[i] = source[i]
+
+
+@kernel
 def extend_gram(weights, basis, pool, slots, start, stop, gram, border):
     """Fill the Gram rows and the border B = basis W Z of working columns start..stop."""
     weighted = np.empty(weights.size)
@@ -263,19 +270,23 @@ def _solve_support(chosen, count, gram, gradient, coef, l1, l2, factor, step):
         k = chosen[a]
         sign = 1.0 if coef[k] > 0.0 else -1.0
         step[a] = gradient[k] - l1[k] * sign - l2[k] * coef[k]
-        for c in range(a + 1):
+        row = factor[a]
+        for c in range(a):
+            other = factor[c]
             value = gram[k, chosen[c]]
-            if a == c:
-                value = value * (1.0 + _LIFT) + l2[k]
-            factor[a, c] = value - plain_dot(factor[a, :c], factor[c, :c])
-            if a == c:
-                if not factor[a, a] > 1e-15 * gram[k, k]:
-                    return False
-                factor[a, a] = np.sqrt(factor[a, a])
-            else:
-                factor[a, c] /= factor[c, c]
+            for q in range(c):
+                value -= row[q] * other[q]
+            row[c] = value / other[c]
+        value = gram[k, k] * (1.0 + _LIFT) + l2[k]
+        for q in range(a):
+            value -= row[q] * row[q]
+        if not value > 1e-15 * gram[k, k]:
+            return False
+        row[a] = np.sqrt(value)
     for a in range(count):
-        step[a] = (step[a] - plain_dot(factor[a, :a], step[:a])) / factor[a, a]
+        for c in range(a):
+            step[a] -= factor[a, c] * step[c]
+        step[a] /= factor[a, a]
     for a in range(count - 1, -1, -1):
         step[a] /= factor[a, a]
         for c in range(a):
@@ -332,10 +343,12 @@ def _approach_support(chosen, count, gram, gradient, coef, l1, l2, step):
 @kernel
 def _turned(chosen, count, size, gram, step, image):
     """image = G step over the whole working set, for a step on the support."""
-    image[:size] = 0.0
+    for c in range(size):
+        image[c] = 0.0
     for a in range(count):
-        if step[a] != 0.0:
-            add_scaled(image[:size], step[a], gram[chosen[a], :size])
+        row = gram[chosen[a]]
+        for c in range(size):
+            image[c] += step[a] * row[c]
 
 
 @kernel
@@ -360,6 +373,7 @@ def _support_newton(size, gram, gradient, coef, l1, l2, chosen, factor, step, im
     change of ||r||^2 and whether the last step reached its minimum.
     """
     change = 0.0
+    full = np.empty(size)
     for _ in range(_NEWTON_STEPS):
         count = _support(size, coef, chosen)
         if count == 0:
@@ -375,17 +389,17 @@ def _support_newton(size, gram, gradient, coef, l1, l2, chosen, factor, step, im
             if (value + step[a]) * value < 0.0 and -value / step[a] < length:
                 length = -value / step[a]
                 first = a
-        if first >= 0:
-            full = step[:count].copy()
-            for a in range(count):
-                value = coef[chosen[a]]
-                if (value + step[a]) * value < 0.0:
-                    step[a] = -value
+        for a in range(count):
+            value = coef[chosen[a]]
+            full[a] = step[a]
+            if (value + step[a]) * value < 0.0:
+                step[a] = -value
         _turned(chosen, count, size, gram, step, image)
         if first >= 0 and not (
             _objective_change(chosen, count, gradient, coef, l1, l2, step, image) < 0.0
         ):
-            step[:count] = length * full
+            for a in range(count):
+                step[a] = length * full[a]
             step[first] = -coef[chosen[first]]
             _turned(chosen, count, size, gram, step, image)
         for a in range(count):
@@ -483,7 +497,7 @@ def solve_squared(
                 m, gram[b], gradient, coef[b], l1, l2, squared_norm, 0.5 * target[b],
                 budget - sweeps[b],
             )  # fmt: skip
-            r[:] = centred[b]
+            _copy(centred[b], r, r.size)
             for q in range(basis.shape[1]):
                 load = 0.0
                 for k in range(m):
@@ -562,7 +576,7 @@ def polish_basis(weights, signs, basis, load, predictor, pseudo, curvature):
         _curvature_solve(weights, curvature, basis, score, step)
         length = 1.0
         for _ in range(30):
-            trial[:] = predictor
+            _copy(predictor, trial, trial.size)
             for q in range(count):
                 add_scaled(trial, length * step[q, 0], basis[q])
             found = _log_loss(weights, signs, trial)
@@ -571,7 +585,7 @@ def polish_basis(weights, signs, basis, load, predictor, pseudo, curvature):
                 break
             length *= 0.5
         value = found
-        predictor[:] = trial
+        _copy(trial, predictor, trial.size)
         for q in range(count):
             load[q] += length * step[q, 0]
         _log_terms(signs, predictor, pseudo, curvature)
@@ -661,7 +675,7 @@ def _log_step(weights, signs, basis, pool, slots, size, l1, l2, old, coef, load,
     trial = np.empty(predictor.size)
     length = 1.0
     for _ in range(40):
-        trial[:] = predictor
+        _copy(predictor, trial, trial.size)
         add_scaled(trial, length, direction)
         after = _log_loss(weights, signs, trial)
         for k in range(size):
@@ -673,10 +687,10 @@ def _log_step(weights, signs, basis, pool, slots, size, l1, l2, old, coef, load,
                     coef[k] = old[k] + length * (coef[k] - old[k])
             for q in range(basis.shape[0]):
                 load[q] += length * turn[q]
-            predictor[:] = trial
+            _copy(trial, predictor, trial.size)
             return True
         length *= 0.5
-    coef[:size] = old[:size]
+    _copy(old, coef, size)
     return False
 
 
@@ -709,7 +723,7 @@ def solve_log(
         psi = residual[b]
         gradient = gradients[b]
         _penalties(m, alpha[b], l1_ratio, order_one[b], order_two[b], l1, l2)
-        predictor[b, :] = offset
+        _copy(offset, predictor[b], n_rows)
         for q in range(n_basis):
             add_scaled(predictor[b], load[b, q], basis[b, q])
         for k in range(m):
@@ -730,7 +744,7 @@ def solve_log(
             squared_norm = 0.0
             for i in range(n_rows):
                 squared_norm += w[i] * psi[i] * psi[i] / curvature[i]
-            old[:m] = coef[b, :m]
+            _copy(coef[b], old, m)
             sweeps[b] += descend(
                 m, model, gradient, coef[b], l1, l2, squared_norm,
                 max(0.01 * gap, 0.1 * target[b]), budget - sweeps[b],

@@ -154,10 +154,10 @@ class LogLoss:
         smallest = np.linalg.eigvalsh((rows * (chunk.weights[b] * curvature)) @ rows.T)[0]
         if not (smallest > _SEPARATED and score <= 1e-12):
             raise ValueError(
-                f"The {chunk.basis.columns[b].size} unpenalised columns separate the two classes "
-                "(or nearly so): their log-loss estimate lies at infinity. Unpenalised columns "
-                "must leave the classes overlapping. Give the separating column a positive "
-                "penalty weight, or leave it out."
+                "The null model of the log loss (offset, intercept and "
+                f"{chunk.basis.columns[b].size} unpenalised columns) has no finite estimate: it separates the two classes, or "
+                "nearly so. It must leave them overlapping. Give a separating column a positive "
+                "penalty weight or leave it out, and check the offset."
             )
 
     def extend(self, chunk: Chunk, problems: Problems) -> None:
