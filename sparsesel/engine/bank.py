@@ -231,13 +231,15 @@ def _part(alphas: int | ArrayLike, chosen: slice) -> int | FloatArray:
     return values[chosen] if values.ndim == 2 else values
 
 
-def geometric_grid(largest: FloatArray, count: int, ratio: float) -> FloatArray:
+def geometric_grid(largest: FloatArray, floor: FloatArray, count: int, ratio: float) -> FloatArray:
     """Grids (B, count) from ``largest`` down to ``ratio * largest``, geometric.
 
     Where nothing correlates with the response (``largest`` 0) any penalty gives the null
-    model; the grid then starts at the resolution of a double, as scikit-learn's does.
+    model; the grid then starts at ``floor``, above rounding, or at the resolution of a
+    double if that is zero too (as scikit-learn's does).
     """
-    start = np.where(largest > 0.0, largest, np.finfo(np.float64).resolution)
+    start = np.where(largest > 0.0, largest, floor)
+    start = np.where(start > 0.0, start, np.finfo(np.float64).resolution)
     return start[:, None] * np.geomspace(1.0, ratio, count)[None, :]
 
 
@@ -246,7 +248,7 @@ def _solve_chunk(design: DesignMatrix, options: _Options, item: _Item) -> BankRe
     chunk = open_chunk(design, item.problems, loss, options.max_iter)
     largest = chunk.alpha_max
     if isinstance(item.alphas, int):
-        alphas = geometric_grid(largest, item.alphas, options.alpha_min_ratio)
+        alphas = geometric_grid(largest, chunk.alpha_floor, item.alphas, options.alpha_min_ratio)
     else:
         alphas = np.broadcast_to(item.alphas, (largest.size, item.alphas.shape[-1]))
     walk = Walk(chunk, loss, np.ascontiguousarray(alphas), item.keep, options.tol)

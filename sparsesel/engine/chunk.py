@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sparsesel.engine.basis import Basis, unpenalised_basis
-from sparsesel.engine.design import DesignMatrix, FloatArray, IntArray
+from sparsesel.engine.design import DesignMatrix, FloatArray, IntArray, Moments
 
 if TYPE_CHECKING:
     from sparsesel.engine.bank import Problems
@@ -26,6 +26,9 @@ if TYPE_CHECKING:
 
 # Residuals with known gradients that are kept per problem.
 _KEPT = 3
+# A gradient below this share of ||x_j|| ||r|| is rounding error; and the share of it at
+# which a grid starts that has no other start, with room for the grid below it.
+_NO_GRADIENT, _FLOOR = 1e-13, 1e-9
 
 
 class Pool:
@@ -110,13 +113,14 @@ class WorkingSets:
 
 @dataclass
 class Kept:
-    """The latest residuals (B, K, n) whose gradients (B, K, p) are known, K in a ring.
+    """The latest residuals (B, K, n) whose gradients are known, K in a ring.
 
+    ``cosine`` (B, K, p) holds x_j'W r_k / (||x_j||_W ||r_k||_W).
     ``pushed`` (B,) counts all that were ever kept; the newest is at (pushed - 1) % K.
     """
 
     residual: FloatArray
-    gradient: NDArray[np.float32]
+    cosine: NDArray[np.float32]
     pushed: IntArray
 
     @classmethod
@@ -128,11 +132,11 @@ class Kept:
             np.zeros(n_problems, np.int64),
         )
 
-    def push(self, problems: IntArray, residual: FloatArray, gradient: FloatArray) -> None:
+    def push(self, problems: IntArray, residual: FloatArray, cosine: FloatArray) -> None:
         """Keep these, the oldest of their problem making room."""
         place = self.pushed[problems] % _KEPT
         self.residual[problems, place] = residual
-        self.gradient[problems, place] = gradient
+        self.cosine[problems, place] = cosine
         self.pushed[problems] += 1
 
 
@@ -171,9 +175,10 @@ class Chunk:
     taken: NDArray[np.bool_]
     norms: FloatArray
     kept: Kept
-    alpha_max: FloatArray
     sweeps: IntArray
-    # Set by the loss at the null model.
+    # Set at the null model, by the loss and from its gradient.
+    alpha_max: FloatArray = field(default_factory=lambda: np.empty(0))
+    alpha_floor: FloatArray = field(default_factory=lambda: np.empty(0))
     null_objective: FloatArray = field(default_factory=lambda: np.empty(0))
     residual: FloatArray = field(default_factory=lambda: np.empty((0, 0)))
     centred: FloatArray = field(default_factory=lambda: np.empty((0, 0)))
@@ -195,8 +200,9 @@ def open_chunk(
     norms = deviation if problems.fit_intercept else np.hypot(moments.mean, deviation)
     order_one, n_left_out = _first_order(design, penalty, deviation, problems.standardize)
     order_two = order_one
-    if problems.l1_ratio < 1.0:
-        order_two = order_one * deviation if problems.standardize else order_one
+    if problems.l1_ratio < 1.0 and problems.standardize:
+        order_two = np.where(np.isinf(order_one), np.inf, deviation)
+        np.multiply(order_two, order_one, out=order_two, where=np.isfinite(order_one))
     basis = unpenalised_basis(design, weights, order_one == 0.0, problems.fit_intercept)
     chunk = Chunk(
         design=design,
@@ -215,14 +221,23 @@ def open_chunk(
         taken=np.zeros((n_problems, p), np.bool_),
         norms=norms,
         kept=Kept.empty(n_problems, n, p),
-        alpha_max=np.zeros(n_problems),
         sweeps=np.zeros(n_problems, np.int64),
     )
     loss.start(chunk)
-    gradient = design.correlate(chunk.weights * chunk.residual)
-    chunk.alpha_max = _alpha_max(gradient, chunk.order_one, chunk.l1_ratio)
-    chunk.kept.push(np.arange(n_problems), chunk.residual, gradient)
+    gradient = keep_gradients(chunk, np.arange(n_problems))
+    chunk.alpha_max, chunk.alpha_floor = _largest_penalties(chunk, gradient, moments)
     return chunk
+
+
+def keep_gradients(chunk: Chunk, problems: IntArray) -> FloatArray:
+    """Multiply the residuals of the named problems with the table, and keep the product."""
+    residual, weights = chunk.residual[problems], chunk.weights[problems]
+    gradient = chunk.design.correlate(weights * residual)
+    length = np.sqrt(np.einsum("bn,bn->b", weights, residual**2))
+    size = chunk.norms[problems] * np.where(length > 0.0, length, 1.0)[:, None]
+    cosine = np.divide(gradient, size, out=np.zeros_like(gradient), where=size > 0.0)
+    chunk.kept.push(problems, residual, cosine)
+    return gradient
 
 
 def _one_if_none(values: FloatArray | None) -> FloatArray | float:
@@ -246,9 +261,19 @@ def _first_order(
     return order_one, np.count_nonzero(constant & ~out, axis=1)
 
 
-def _alpha_max(gradient: FloatArray, order_one: FloatArray, l1_ratio: float) -> FloatArray:
-    """The smallest penalty at which every penalised coefficient is zero (B,)."""
-    with np.errstate(invalid="ignore"):
-        ratios = np.abs(gradient) / order_one
-    ratios[np.isinf(order_one)] = 0.0
-    return ratios.max(axis=1, initial=0.0) / l1_ratio
+def _largest_penalties(
+    chunk: Chunk, gradient: FloatArray, moments: Moments
+) -> tuple[FloatArray, FloatArray]:
+    """The smallest penalty (B,) that empties each problem, and the one rounding would ask for.
+
+    A gradient that is rounding error of its own sum (a column in the span of the
+    unpenalised ones) counts as zero.
+    """
+    length = np.sqrt(np.einsum("bn,bn->b", chunk.weights, chunk.residual**2))
+    size = np.hypot(moments.mean, moments.scale) * length[:, None]
+    out = np.isinf(chunk.order_one)
+    penalty = np.where(out, 1.0, chunk.order_one) * chunk.l1_ratio
+    ratios = np.where(out | (np.abs(gradient) <= _NO_GRADIENT * size), 0.0, np.abs(gradient))
+    largest = (ratios / penalty).max(axis=1, initial=0.0)
+    floor = (np.where(out, 0.0, size) / penalty).max(axis=1, initial=0.0) * _FLOOR
+    return largest, floor

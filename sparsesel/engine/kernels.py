@@ -37,9 +37,15 @@ _NO_DIRECTION = 1e-12
 _SUPPORT_SWEEPS = 8
 # Cycles of sweeps before a Newton step on the support is tried: well-conditioned problems
 # never pay for a factorisation.
-_CYCLES_BEFORE_NEWTON = 2
+_CYCLES_BEFORE_NEWTON = 1
+# Newton steps in a row, each of which but the last drops some coefficients.
+_NEWTON_STEPS = 10
+# Largest support that is factored; beyond it, conjugate gradients with so many steps at
+# most, down to this share of the first residual.
+_DIRECT = 250
+_CONJUGATE_STEPS, _CONJUGATE_REST = 60, 1e-3
 # Relative lift of the diagonal that keeps the factorisation of a singular support alive.
-_LIFT = 1e-12
+_LIFT = 1e-9
 # Log loss: floor of the curvature p (1 - p), and the score at which the unpenalised
 # coordinates count as solved.
 _CURVATURE_FLOOR = 1e-10
@@ -278,35 +284,121 @@ def _solve_support(chosen, count, gram, gradient, coef, l1, l2, factor, step):
 
 
 @kernel
-def _support_newton(size, gram, gradient, coef, l1, l2, chosen, factor, step):
-    """Newton steps on the support, each cut where a coefficient would change its sign.
+def _approach_support(chosen, count, gram, gradient, coef, l1, l2, step):
+    """The same step by conjugate gradients, stopped early; for supports too large to factor.
 
-    Inside an orthant the objective is a convex quadratic and the step leads to its
-    minimum, so the objective falls all along it.  Returns the change of ||r||^2.
+    Every iterate lowers the quadratic, so a step that stops early is a shorter step, not a
+    wrong one (Hestenes and Stiefel 1952, scaled by the diagonal).
+    """
+    rest = np.empty(count)
+    scale = np.empty(count)
+    along = np.empty(count)
+    image = np.empty(count)
+    block = np.empty((count, count))
+    for a in range(count):
+        k = chosen[a]
+        sign = 1.0 if coef[k] > 0.0 else -1.0
+        rest[a] = gradient[k] - l1[k] * sign - l2[k] * coef[k]
+        scale[a] = 1.0 / (gram[k, k] * (1.0 + _LIFT) + l2[k])
+        step[a] = 0.0
+        along[a] = scale[a] * rest[a]
+        for c in range(count):
+            block[a, c] = gram[k, chosen[c]]
+        block[a, a] += _LIFT * gram[k, k] + l2[k]
+    size = 0.0
+    for a in range(count):
+        size += rest[a] * rest[a] * scale[a]
+    stop = _CONJUGATE_REST**2 * size
+    for _ in range(_CONJUGATE_STEPS):
+        if not size > stop:
+            break
+        curvature = 0.0
+        for a in range(count):
+            image[a] = plain_dot(block[a], along)
+            curvature += image[a] * along[a]
+        if not curvature > 0.0:
+            break
+        length = size / curvature
+        fresh = 0.0
+        for a in range(count):
+            step[a] += length * along[a]
+            rest[a] -= length * image[a]
+            fresh += rest[a] * rest[a] * scale[a]
+        for a in range(count):
+            along[a] = scale[a] * rest[a] + fresh / size * along[a]
+        size = fresh
+
+
+@kernel
+def _turned(chosen, count, size, gram, step, image):
+    """image = G step over the whole working set, for a step on the support."""
+    image[:size] = 0.0
+    for a in range(count):
+        if step[a] != 0.0:
+            add_scaled(image[:size], step[a], gram[chosen[a], :size])
+
+
+@kernel
+def _objective_change(chosen, count, gradient, coef, l1, l2, step, image):
+    total = 0.0
+    for a in range(count):
+        k = chosen[a]
+        new = coef[k] + step[a]
+        total += step[a] * (0.5 * image[k] - gradient[k])
+        total += l1[k] * (abs(new) - abs(coef[k]))
+        total += 0.5 * l2[k] * (new * new - coef[k] * coef[k])
+    return total
+
+
+@kernel
+def _support_newton(size, gram, gradient, coef, l1, l2, chosen, factor, step, image):
+    """Newton steps on the support: the step to the minimum at fixed signs.
+
+    Coefficients that would change their sign stop at zero, if the objective then falls;
+    else the step is cut where the first of them would, along which the objective falls for
+    certain, a convex quadratic inside an orthant whose minimum lies ahead.  Returns the
+    change of ||r||^2 and whether the last step reached its minimum.
     """
     change = 0.0
-    for _ in range(10):
+    for _ in range(_NEWTON_STEPS):
         count = _support(size, coef, chosen)
-        if count == 0 or not _solve_support(
-            chosen, count, gram, gradient, coef, l1, l2, factor, step
-        ):
-            return change
+        if count == 0:
+            return change, True
+        if count > factor.shape[0]:
+            _approach_support(chosen, count, gram, gradient, coef, l1, l2, step)
+        elif not _solve_support(chosen, count, gram, gradient, coef, l1, l2, factor, step):
+            return change, False
         length = 1.0
-        blocking = -1
+        first = -1
         for a in range(count):
             value = coef[chosen[a]]
-            if (value + step[a]) * value <= 0.0:
-                reach = -value / step[a]
-                if reach < length:
-                    length = reach
-                    blocking = a
+            if (value + step[a]) * value < 0.0 and -value / step[a] < length:
+                length = -value / step[a]
+                first = a
+        if first >= 0:
+            full = step[:count].copy()
+            for a in range(count):
+                value = coef[chosen[a]]
+                if (value + step[a]) * value < 0.0:
+                    step[a] = -value
+        _turned(chosen, count, size, gram, step, image)
+        if first >= 0 and not (
+            _objective_change(chosen, count, gradient, coef, l1, l2, step, image) < 0.0
+        ):
+            step[:count] = length * full
+            step[first] = -coef[chosen[first]]
+            _turned(chosen, count, size, gram, step, image)
         for a in range(count):
             k = chosen[a]
-            new = 0.0 if a == blocking else coef[k] + length * step[a]
-            change += _move(k, new, size, gram, gradient, coef)
-        if blocking < 0:
-            return change
-    return change
+            change += step[a] * (image[k] - 2.0 * gradient[k])
+        for a in range(count):
+            k = chosen[a]
+            coef[k] = 0.0 if step[a] == -coef[k] else coef[k] + step[a]
+        for k in range(size):
+            gradient[k] -= image[k]
+        if first < 0:
+            return change, True
+    return change, False
 
 
 @kernel
@@ -319,6 +411,7 @@ def descend(size, gram, gradient, coef, l1, l2, squared_norm, target, max_sweeps
     chosen = np.empty(size, np.int64)
     factor = np.empty((0, 0))
     step = np.empty(size)
+    image = np.empty(size)
     sweeps = 0
     cycle = 0
     while sweeps < max_sweeps:
@@ -331,10 +424,13 @@ def descend(size, gram, gradient, coef, l1, l2, squared_norm, target, max_sweeps
         cycle += 1
         if cycle > _CYCLES_BEFORE_NEWTON:
             if factor.shape[0] == 0:
-                factor = np.empty((size, size))
-            change = _support_newton(size, gram, gradient, coef, l1, l2, chosen, factor, step)
+                factor = np.empty((min(size, _DIRECT), min(size, _DIRECT)))
+            change, arrived = _support_newton(
+                size, gram, gradient, coef, l1, l2, chosen, factor, step, image
+            )
             squared_norm = max(squared_norm + change, 0.0)
-            continue
+            if arrived:
+                continue
         count = _support(size, coef, chosen)
         for _ in range(_SUPPORT_SWEEPS):
             change, largest = _sweep(chosen, count, size, gram, gradient, coef, l1, l2)

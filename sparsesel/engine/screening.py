@@ -12,8 +12,10 @@ weighted least-squares coefficients of r on the r_k, and the bound holds whateve
 Under an intercept all residuals are orthogonal to the constant, and ||x_j||_W is the
 column's weighted standard deviation.
 
-Kept gradients are single precision; their rounding, and that of double precision in the
-long sums, is added to the bound.  The columns left undecided are multiplied exactly.
+What is kept is not G_kj but the cosine G_kj / (||x_j||_W ||r_k||_W), in single precision:
+it can neither overflow nor vanish, whatever the units.  Its rounding, and that of double
+precision in the long sums, is added to the bound.  The columns left undecided are
+multiplied exactly.
 """
 
 from __future__ import annotations
@@ -34,9 +36,9 @@ _STRIP = 256
 
 @kernel
 def _mix(weights, residual, kept, known, newest, coefficients):
-    """Write the coefficients a of the residual on the kept ones; returns ||d||_W.
+    """Write a_k ||r_k||_W, the coefficients on the kept cosines; returns ||d||_W.
 
-    The norm carries the rounding of the kept gradients, |G_kj| <= ||x_j||_W ||r_k||_W.
+    The norm carries the rounding of the cosines, which are at most one.
     """
     normal = np.zeros((known, known))
     diagonal = np.zeros(known)
@@ -62,7 +64,8 @@ def _mix(weights, residual, kept, known, newest, coefficients):
         rest += weights[i] * gap * gap
     rounding = 0.0
     for k in range(known):
-        rounding += abs(coefficients[k]) * np.sqrt(diagonal[k])
+        coefficients[k] *= np.sqrt(diagonal[k])
+        rounding += abs(coefficients[k])
     return np.sqrt(rest) + _SINGLE * rounding
 
 
@@ -95,14 +98,14 @@ def _solve_in_place(normal, right):
 
 
 @exact_kernel
-def _predict(gradients, coefficients, start, stop, value):
-    """|sum_k a_k G_kj| of a strip of columns."""
+def _predict(cosines, coefficients, start, stop, value):
+    """|sum_k a_k G_kj| / ||x_j||_W of a strip of columns."""
     # Slices, because an index that is a sum keeps the loop from being vectorised.
-    row = gradients[0, start:stop]
+    row = cosines[0, start:stop]
     for c in range(row.size):
         value[c] = coefficients[0] * row[c]
     for k in range(1, coefficients.size):
-        row = gradients[k, start:stop]
+        row = cosines[k, start:stop]
         for c in range(row.size):
             value[c] += coefficients[k] * row[c]
     for c in range(row.size):
@@ -110,22 +113,22 @@ def _predict(gradients, coefficients, start, stop, value):
 
 
 @exact_kernel
-def _undecided(gradients, coefficients, rest, norms, order_one, taken, limit, found):
+def _undecided(cosines, coefficients, rest, norms, order_one, taken, limit, found):
     """Columns outside the working set whose bound does not stay under ``limit`` * l1."""
     total = 0
     value = np.empty(_STRIP)
     lowered = limit * (1.0 - _DOUBLE)
     for start in range(0, order_one.size, _STRIP):
         stop = min(start + _STRIP, order_one.size)
-        _predict(gradients, coefficients, start, stop, value)
+        _predict(cosines, coefficients, start, stop, value)
         norm, one, busy = norms[start:stop], order_one[start:stop], taken[start:stop]
         hits = 0
         for c in range(norm.size):
-            hits += not (value[c] + rest * norm[c] <= lowered * one[c])
+            hits += not ((value[c] + rest) * norm[c] <= lowered * one[c])
         if hits == 0:
             continue
         for c in range(norm.size):
-            if value[c] + rest * norm[c] <= lowered * one[c] or busy[c] or one[c] == np.inf:
+            if (value[c] + rest) * norm[c] <= lowered * one[c] or busy[c] or one[c] == np.inf:
                 continue
             if total == found.size:
                 return -1
@@ -136,7 +139,7 @@ def _undecided(gradients, coefficients, rest, norms, order_one, taken, limit, fo
 
 @exact_kernel
 def undecided(
-    problems, weights, residual, kept_residual, kept_gradient, pushed, norms, order_one, taken,
+    problems, weights, residual, kept_residual, kept_cosine, pushed, norms, order_one, taken,
     limit, found, totals,
 ):  # fmt: skip
     """Columns of each named problem that kept gradients can't bound under limit[b] * l1.
@@ -150,12 +153,12 @@ def undecided(
         newest = (pushed[b] - 1) % kept_residual.shape[1]
         rest = _mix(weights[b], residual[b], kept_residual[b], known, newest, mixing)
         totals[b] = _undecided(
-            kept_gradient[b], mixing, rest, norms[b], order_one[b], taken[b], limit[b], found[b]
+            kept_cosine[b], mixing, rest, norms[b], order_one[b], taken[b], limit[b], found[b]
         )
 
 
 @exact_kernel
-def _promising(gradients, coefficients, order_one, taken, threshold, most, found):
+def _promising(cosines, coefficients, norms, order_one, taken, threshold, most, found):
     size = order_one.size
     named = np.empty(size, np.int64)
     ratios = np.empty(size)
@@ -163,10 +166,11 @@ def _promising(gradients, coefficients, order_one, taken, threshold, most, found
     value = np.empty(_STRIP)
     for start in range(0, size, _STRIP):
         stop = min(start + _STRIP, size)
-        _predict(gradients, coefficients, start, stop, value)
-        one, busy = order_one[start:stop], taken[start:stop]
+        _predict(cosines, coefficients, start, stop, value)
+        norm, one, busy = norms[start:stop], order_one[start:stop], taken[start:stop]
         hits = 0
         for c in range(one.size):
+            value[c] *= norm[c]
             hits += value[c] > threshold * one[c]
         if hits == 0:
             continue
@@ -180,8 +184,8 @@ def _promising(gradients, coefficients, order_one, taken, threshold, most, found
 
 @exact_kernel
 def promising(
-    problems, weights, residual, kept_residual, kept_gradient, pushed, order_one, taken, threshold,
-    most, found, totals,
+    problems, weights, residual, kept_residual, kept_cosine, pushed, norms, order_one, taken,
+    threshold, most, found, totals,
 ):  # fmt: skip
     """Columns whose predicted |g| exceeds threshold[b] * l1: the most[b] largest by ratio."""
     for b in problems:
@@ -190,7 +194,14 @@ def promising(
         newest = (pushed[b] - 1) % kept_residual.shape[1]
         _mix(weights[b], residual[b], kept_residual[b], known, newest, mixing)
         totals[b] = _promising(
-            kept_gradient[b], mixing, order_one[b], taken[b], threshold[b], most[b], found[b]
+            kept_cosine[b],
+            mixing,
+            norms[b],
+            order_one[b],
+            taken[b],
+            threshold[b],
+            most[b],
+            found[b],
         )
 
 

@@ -24,7 +24,7 @@ from numpy.typing import NDArray
 from scipy import sparse
 
 from sparsesel.engine import kernels, screening
-from sparsesel.engine.chunk import Chunk, Outside
+from sparsesel.engine.chunk import Chunk, Outside, keep_gradients
 from sparsesel.engine.design import FloatArray, IntArray
 from sparsesel.engine.status import Status
 
@@ -97,8 +97,11 @@ class Walk:
             self.loss.solve(chunk, pending, alpha, inside * self.tol * chunk.null_objective)
             self._know_outside(pending, alpha * chunk.l1_ratio)
             gap = self.loss.certify(chunk, pending, alpha, self._outside)
-            self.gap[pending, k] = gap[pending]
-            open_ = pending[~(gap[pending] <= self.tol)]
+            # Weak duality allows a gap below zero by rounding only.
+            self.gap[pending, k] = np.where(np.abs(gap) <= self.tol, np.maximum(gap, 0.0), gap)[
+                pending
+            ]
+            open_ = pending[~(np.abs(gap[pending]) <= self.tol)]
             grown = self._admit_violators(open_, alpha * chunk.l1_ratio)
             repairs[open_] += ~grown
             inside[open_[~grown]] *= 0.1
@@ -132,8 +135,9 @@ class Walk:
         """Admit columns whose predicted |g| exceeds threshold * rho * v * s."""
         chunk, outside = self.chunk, self._outside
         screening.promising(
-            problems, chunk.weights, chunk.residual, chunk.kept.residual, chunk.kept.gradient,
-            chunk.kept.pushed, chunk.order_one, chunk.taken, threshold * chunk.l1_ratio,
+            problems, chunk.weights, chunk.residual, chunk.kept.residual, chunk.kept.cosine,
+            chunk.kept.pushed, chunk.norms, chunk.order_one, chunk.taken,
+            threshold * chunk.l1_ratio,
             self._most_proposed(), outside.found, outside.totals,
         )  # fmt: skip
         self._admit(problems)
@@ -144,9 +148,7 @@ class Walk:
         self._find_undecided(problems, limit)
         crowded = problems[self._outside.totals[problems] < 0]
         if crowded.size:
-            residual = chunk.residual[crowded]
-            gradient = chunk.design.correlate(chunk.weights[crowded] * residual)
-            chunk.kept.push(crowded, residual, gradient)
+            keep_gradients(chunk, crowded)
             self._find_undecided(crowded, limit)
         if (self._outside.totals[crowded] < 0).any():
             # A fresh product leaves only columns at their limits undecided; here those are
@@ -161,7 +163,7 @@ class Walk:
     def _find_undecided(self, problems: IntArray, limit: FloatArray) -> None:
         chunk, outside = self.chunk, self._outside
         screening.undecided(
-            problems, chunk.weights, chunk.residual, chunk.kept.residual, chunk.kept.gradient,
+            problems, chunk.weights, chunk.residual, chunk.kept.residual, chunk.kept.cosine,
             chunk.kept.pushed, chunk.norms, chunk.order_one, chunk.taken, limit, outside.found,
             outside.totals,
         )  # fmt: skip
