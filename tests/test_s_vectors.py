@@ -533,6 +533,12 @@ def median_time(function, repeats):
     return float(np.median(times))
 
 
+def side_by_side(first, second, repeats):
+    """Median times of two functions called in turn, so that both meet the same machine."""
+    times = [(median_time(first, 1), median_time(second, 1)) for _ in range(repeats)]
+    return np.median(times, axis=0)
+
+
 @pytest.mark.benchmark
 @pytest.mark.parametrize("method", ["mvr", "max_entropy", "sdp"])
 @pytest.mark.parametrize("design", ["autoregressive", "Wishart"])
@@ -542,8 +548,10 @@ def test_a_thousand_features_within_a_hundred_factorisations(method, design):
     else:
         matrix = sample_correlation(spawn(15, 1)[0], 1000, 3000)
     s_vector(matrix[:40, :40], method)
-    factorisation = median_time(lambda: np.linalg.cholesky(matrix), 7)
-    assert median_time(lambda: s_vector(matrix, method), 3) <= 100.0 * factorisation
+    ours, factorisation = side_by_side(
+        lambda: s_vector(matrix, method), lambda: np.linalg.cholesky(matrix), 5
+    )
+    assert ours <= 100.0 * factorisation
 
 
 @pytest.mark.benchmark

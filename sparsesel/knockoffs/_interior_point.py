@@ -50,10 +50,24 @@ from sparsesel.knockoffs._linalg import (
     largest_step,
     symmetrize,
 )
-from sparsesel.knockoffs._newton import MaximumEntropy, SolverResult, minimize_smooth
+from sparsesel.knockoffs._newton import (
+    MaximumEntropy,
+    SolverResult,
+    entropy_gap,
+    minimize_smooth,
+    residual_variances,
+)
 
 # How far towards the boundary of the cone a step may go.
 _FRACTION = 0.93
+
+# How near to the analytic centre the first iterate is, in the gap of maximum entropy.
+_CENTRED = 0.3
+
+# Relative gap above which, and mean diagonal of D^-1 below which, products are taken in single
+# precision.
+_ROUGH = 1e-2
+_INSIDE = 30.0
 
 # A step shorter than this makes no progress that rounding would not undo.
 _SHORTEST = 1e-5
@@ -91,10 +105,9 @@ class Ties:
 
 @dataclass(frozen=True)
 class _Iterate:
-    """Primal point, slack with factor and inverse, dual point with factor, last step lengths."""
+    """Primal point, factor and inverse of D, dual point with factor, last step lengths."""
 
     s: np.ndarray
-    slack: np.ndarray
     slack_factor: np.ndarray
     inverse: np.ndarray
     dual: np.ndarray
@@ -128,7 +141,11 @@ def maximize_sum(
             best = SolverResult(iterate.s, gap, n_iter)
         if gap <= tol or max(iterate.primal_step, iterate.dual_step) < 2 * _SHORTEST:
             break
-        iterate = _advance(correlation, iterate, ties)
+        # far from the optimum and well inside the cone the direction needs few digits, and its
+        # two products cost most
+        rough = gap > _ROUGH and np.trace(iterate.inverse) < _INSIDE * len(correlation)
+        precision = np.float32 if rough else np.float64
+        iterate = _advance(correlation, iterate, ties, precision)
     return replace(best, n_iter=n_iter)
 
 
@@ -146,19 +163,15 @@ def _start(correlation: np.ndarray, ties: Ties) -> _Iterate:
     The size of the dual point is a tenth of the mu at which the Newton decrement of the barrier
     problem is one; smaller and the first steps are cut at the boundary, larger and they are wasted.
     """
-    centre = minimize_smooth(correlation, MaximumEntropy(), tol=0.3, max_iter=50).s
-    s = np.minimum(centre, 0.8)
-    if ties.starts is not None:
-        s = np.minimum.reduceat(s, ties.starts)
-    slack = add_diagonal(2.0 * correlation, -ties.spread(s))
-    factor = _definite(slack)
-    inverse = inverse_from_factor(factor.copy(order="K"))
+    s, factor, inverse = _inside(correlation, residual_variances(correlation), ties)
+    if entropy_gap(ties.spread(s), np.diagonal(inverse)) > _CENTRED:
+        centre = minimize_smooth(correlation, MaximumEntropy(), tol=_CENTRED, max_iter=50).s
+        s, factor, inverse = _inside(correlation, centre, ties)
     curvature = ties.pooled_matrix(inverse * inverse)
     add_diagonal(curvature, 1.0 / s**2 + 1.0 / (1.0 - s) ** 2)
     size = 0.1 * np.sqrt(ties.size @ ScaledSolver(curvature).solve(ties.size))
     return _Iterate(
         s=s,
-        slack=slack,
         slack_factor=factor,
         inverse=inverse,
         dual=size * inverse,
@@ -170,6 +183,17 @@ def _start(correlation: np.ndarray, ties: Ties) -> _Iterate:
     )
 
 
+def _inside(
+    correlation: np.ndarray, values: np.ndarray, ties: Ties
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """A point below feasible values, with the factor and the inverse of its slack."""
+    s = np.minimum(values, 0.8)
+    if ties.starts is not None:
+        s = np.minimum.reduceat(s, ties.starts)
+    factor = _definite(add_diagonal(2.0 * correlation, -ties.spread(s)))
+    return s, factor, inverse_from_factor(factor.copy(order="K"))
+
+
 def _definite(matrix: np.ndarray) -> np.ndarray:
     """Cholesky factor of a matrix known to be positive definite."""
     factor = cholesky(matrix)
@@ -178,25 +202,26 @@ def _definite(matrix: np.ndarray) -> np.ndarray:
     return factor
 
 
-def _advance(correlation: np.ndarray, at: _Iterate, ties: Ties) -> _Iterate:
+def _advance(
+    correlation: np.ndarray, at: _Iterate, ties: Ties, precision: type = np.float64
+) -> _Iterate:
     """One predictor-corrector iteration."""
     s, upper_slack = at.s, 1.0 - at.s
-    complementarity = float(np.vdot(at.slack, at.dual) + s @ at.lower + upper_slack @ at.upper) / (
-        len(correlation) + 2 * len(s)
-    )
+    products = 2.0 * np.vdot(correlation, at.dual) - s @ ties.pooled(np.diagonal(at.dual))
+    products += s @ at.lower + upper_slack @ at.upper
+    complementarity = float(products) / (len(correlation) + 2 * len(s))
     centring = max(0.02, (1.0 - min(at.primal_step, at.dual_step)) ** 1.5)
     system = ties.pooled_matrix(at.dual * at.inverse)
     add_diagonal(system, at.lower / s + at.upper / upper_slack)
     solver = ScaledSolver(system)
-    direction = _corrected_direction(at, solver, centring * complementarity, ties)
+    direction = _corrected_direction(at, solver, centring * complementarity, ties, precision)
 
     primal_step, primal = _primal_step(correlation, at, direction, ties)
     dual_step, dual = _dual_step(at, direction)
     return _Iterate(
         s=s + primal_step * direction.s,
-        slack=primal[0],
-        slack_factor=primal[1],
-        inverse=inverse_from_factor(primal[1].copy(order="K")),
+        slack_factor=primal,
+        inverse=inverse_from_factor(primal.copy(order="K")),
         dual=dual[0],
         dual_factor=dual[1],
         lower=at.lower + dual_step * direction.lower,
@@ -207,13 +232,15 @@ def _advance(correlation: np.ndarray, at: _Iterate, ties: Ties) -> _Iterate:
 
 
 def _corrected_direction(
-    at: _Iterate, solver: ScaledSolver, target: float, ties: Ties
+    at: _Iterate, solver: ScaledSolver, target: float, ties: Ties, precision: type
 ) -> _Direction:
     """Predictor (mu = 0), then the step to ``target`` with the predictor's second-order terms."""
     s, upper_slack, inverse = at.s, 1.0 - at.s, at.inverse
     diagonal = ties.pooled(np.diagonal(inverse))
     first = solver.solve(ties.size)
-    second = symmetrize((at.dual * ties.spread(first)) @ inverse)
+    other: np.ndarray = inverse.astype(precision, copy=False)
+    second = symmetrize((at.dual * ties.spread(first)).astype(precision, copy=False) @ other)
+    second = second.astype(np.float64, copy=False)
     second -= at.dual
     second *= ties.spread(first)
     lower = (at.lower + (at.lower / s) * first) * first / s
@@ -223,7 +250,7 @@ def _corrected_direction(
     x = solver.solve(right_side)
 
     second += at.dual * ties.spread(x)
-    dual = symmetrize(second @ inverse)
+    dual = symmetrize(second.astype(precision, copy=False) @ other).astype(np.float64, copy=False)
     dual -= at.dual
     dual += target * inverse
     return _Direction(
@@ -242,8 +269,8 @@ def _to_boundary(values: np.ndarray, change: np.ndarray) -> float:
 
 def _primal_step(
     correlation: np.ndarray, at: _Iterate, direction: _Direction, ties: Ties
-) -> tuple[float, tuple[np.ndarray, np.ndarray]]:
-    """Step length in s, with the slack it leads to and its factor."""
+) -> tuple[float, np.ndarray]:
+    """Step length in s, with the factor of the slack it leads to."""
     step = min(
         _to_boundary(at.s, direction.s),
         _to_boundary(1.0 - at.s, -direction.s),
@@ -252,11 +279,11 @@ def _primal_step(
     step = min(1.0, _FRACTION * step)
     while step > _SHORTEST:
         slack = add_diagonal(2.0 * correlation, -ties.spread(at.s + step * direction.s))
-        factor = cholesky(slack)
+        factor = cholesky(slack, overwrite=True)
         if factor is not None:
-            return step, (slack, factor)
+            return step, factor
         step *= 0.8
-    return 0.0, (at.slack, at.slack_factor)
+    return 0.0, at.slack_factor
 
 
 def _dual_step(at: _Iterate, direction: _Direction) -> tuple[float, tuple[np.ndarray, np.ndarray]]:

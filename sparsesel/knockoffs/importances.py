@@ -23,7 +23,7 @@ Features without a copy (constant ones, say) are in the table once and have cont
 
 **Tuned lasso.** One grid of penalties, that of the whole table; K folds are one bank; the penalty
 with the smallest mean held-out loss. The grid is gone down in parts and left once the smallest
-loss lies far enough above its end, because the lower end costs most and decides nothing.
+loss lies well above its end, because the lower end costs most and decides nothing.
 
 **Entry point.** Z_j is the penalty at which column j enters the lasso path. The path is solved on
 a geometric grid. Between two of its points, a_k < Z_j <= a_(k-1), the size of the standardised
@@ -94,10 +94,13 @@ __all__ = [
 
 FloatArray = NDArray[np.float64]
 
-# The grid of penalties: three decades in steps of 7%, solved in parts of a factor of 2.3.
-_GRID, _ALPHA_MIN_RATIO, _PART = 100, 1e-3, 12
-# The smallest loss must lie this many points (a factor of 1.4) above the end to be believed.
-_BEYOND = 5
+# The grid of penalties: three decades in steps of 7%, solved in parts of a factor of two.
+_GRID, _ALPHA_MIN_RATIO, _PART = 100, 1e-3, 10
+# The smallest loss is believed when it lies this many points above the end, a factor of three in
+# the penalty, or the fewer, a factor of 1.4, once a quarter of its gain on the null model is lost.
+_FAR, _NEAR = 15, 5
+# Of an outcome that intercept and covariates explain only rounding is left, relative to its size.
+_NOTHING_LEFT = 1e-12
 # Ridge penalties that are tried, relative to the largest squared singular value.
 _RIDGE_GRID = np.geomspace(1e3, 1e-6, 100)
 
@@ -508,9 +511,19 @@ class LassoDifference(Importance):
             found = results[-1].held_out_loss
             assert found is not None
             loss = np.concatenate([loss, found.mean(axis=0)])
-            if np.nanargmin(loss) < len(loss) - _BEYOND:
+            if _is_past(loss):
                 break
-        return int(np.nanargmin(loss)), results
+        return int(np.argmin(loss)), results
+
+
+def _is_past(loss: FloatArray) -> bool:
+    """Whether the smallest held-out loss of a grid has been seen in these first points of it.
+
+    The loss can fall in steps, one for every strong feature that enters, with a rise before each.
+    """
+    best = int(np.argmin(loss))
+    beyond, gain = len(loss) - 1 - best, loss[0] - loss[best]
+    return beyond >= _FAR or (beyond >= _NEAR and 0 < gain <= 4 * (loss[-1] - loss[best]))
 
 
 @dataclass(frozen=True)
@@ -579,8 +592,11 @@ class _Working:
         fixed = np.vstack([np.ones(len(root)), covariates]) * root
         left, values, _ = np.linalg.svd(fixed.T, full_matrices=False)
         basis = left[:, values > 1e-10 * values[0]]
-        u = root * response
-        return cls(root, basis, u - basis @ (basis.T @ u), results)
+        whole = root * response
+        u = whole - basis @ (basis.T @ whole)
+        if np.linalg.norm(u) <= _NOTHING_LEFT * np.linalg.norm(whole):
+            u = np.zeros_like(u)
+        return cls(root, basis, u, results)
 
     def columns(self, wide: WidenedTable) -> FloatArray:
         """Projected penalised columns as rows, zero where nothing but rounding is left."""
