@@ -738,7 +738,7 @@ class TestBadInput:
         X[15 : 15 + overlap, 2] = 0.0
         y = (np.arange(30) >= 15).astype(float)
         v = np.array([1, 1, 0, 1, 1, 1.0])
-        match = "The 1 unpenalised columns separate the two classes.*must leave.*Give the"
+        match = "1 unpenalised columns.*separates the two classes.*must leave.*Give a"
         with pytest.raises(ValueError, match=match):
             self.call(loss="log_loss", X=X, y=y, penalty_weights=v)
         path = self.call(loss="log_loss", X=X, y=y, alphas=[0.05])
