@@ -155,9 +155,9 @@ class LogLoss:
         if not (smallest > _SEPARATED and score <= 1e-12):
             raise ValueError(
                 "The null model of the log loss (offset, intercept and "
-                f"{chunk.basis.columns[b].size} unpenalised columns) has no finite "
-                "estimate: it separates the two classes, or nearly so. It must leave them overlapping. Give a separating column a positive "
-                "penalty weight or leave it out, and check the offset."
+                f"{chunk.basis.columns[b].size} unpenalised columns) has no finite estimate: it "
+                "separates the two classes, or nearly so. It must leave them overlapping. Give a "
+                "separating column a positive penalty weight or leave it out, and check the offset."
             )
 
     def extend(self, chunk: Chunk, problems: Problems) -> None:
