@@ -46,7 +46,7 @@ class Pool:
         new = np.unique(columns[self.slot_of[columns] < 0])
         stop = self._used + new.size
         if stop > self.rows.shape[0]:
-            room = np.empty((max(64, stop + stop // 2), self.rows.shape[1]))
+            room = np.empty((max(256, 2 * stop), self.rows.shape[1]))
             room[: self._used] = self.rows[: self._used]
             self.rows = room
         if new.size:
@@ -100,7 +100,7 @@ class WorkingSets:
         present = self.coef.shape[1]
         if capacity <= present:
             return
-        room = max(32, capacity + capacity // 3)
+        room = max(64, capacity + capacity // 2)
         for name in ("columns", "slots", "coef", "order_one", "order_two", "border", "gradient"):
             old = getattr(self, name)
             new = np.zeros((old.shape[0], room, *old.shape[2:]), old.dtype)

@@ -85,25 +85,44 @@ def _copy(source, target, count):
 
 
 @kernel
+def _four_dots(block, column):
+    """Products of four rows with one column, which is read once for all of them."""
+    one, two, three, four = 0.0, 0.0, 0.0, 0.0
+    first, second, third, fourth = block[0], block[1], block[2], block[3]
+    for i in range(column.size):
+        one += first[i] * column[i]
+        two += second[i] * column[i]
+        three += third[i] * column[i]
+        four += fourth[i] * column[i]
+    return one, two, three, four
+
+
+@kernel
 def extend_gram(weights, basis, pool, slots, start, stop, gram, border):
     """Fill the Gram rows and the border B = basis W Z of working columns start..stop."""
-    weighted = np.empty(weights.size)
+    block = np.zeros((4, weights.size))
     n_basis = basis.shape[0]
-    for a in range(start, stop):
-        column = pool[slots[a]]
-        for i in range(weights.size):
-            weighted[i] = weights[i] * column[i]
+    for a in range(start, stop, 4):
+        width = min(4, stop - a)
+        for k in range(width):
+            column = pool[slots[a + k]]
+            row = block[k]
+            for i in range(weights.size):
+                row[i] = weights[i] * column[i]
         for q in range(n_basis):
-            border[a, q] = plain_dot(weighted, basis[q])
-        for c in range(a + 1):
-            value = plain_dot(weighted, pool[slots[c]])
-            norm = value
-            for q in range(n_basis):
-                value -= border[a, q] * border[c, q]
-            if a == c and value <= _NO_DIRECTION * norm:
-                value = 0.0
-            gram[a, c] = value
-            gram[c, a] = value
+            products = _four_dots(block, basis[q])
+            for k in range(width):
+                border[a + k, q] = products[k]
+        for c in range(a + width):
+            products = _four_dots(block, pool[slots[c]])
+            for k in range(width):
+                value = products[k]
+                for q in range(n_basis):
+                    value -= border[a + k, q] * border[c, q]
+                if c == a + k and value <= _NO_DIRECTION * products[k]:
+                    value = 0.0
+                gram[a + k, c] = value
+                gram[c, a + k] = value
 
 
 @kernel
