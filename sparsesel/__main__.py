@@ -29,7 +29,7 @@ from sparsesel.study import cross_check
 _WIDTH = 96
 _N_FOLDS = 5
 # Per outcome: enough to be convincing, few enough to be waited for.
-_CROSS_CHECKED, _CHECK_SECONDS = 5, 15
+_CROSS_CHECKED, _CHECK_SECONDS = 3, 15
 _NEAR_MISSES = 4
 
 _TITLES = {
@@ -106,7 +106,7 @@ def _panel(selector: StabilitySelector, table: OrchardTable) -> str:
     )
     chosen = [name for name in ranked if name in selector.claim_.selected]
     missed = [name for name in ranked if name not in chosen][:_NEAR_MISSES]
-    truth = {name: _truth(name, table) for name in ranked}
+    truth = _truth(table)
     counts = [
         f"{sum(truth[name] == kind for name in chosen)} {kind}"
         for kind in ("true", "related neighbour", "false")
@@ -130,10 +130,13 @@ def _panel(selector: StabilitySelector, table: OrchardTable) -> str:
     return "\n".join(rows)
 
 
-def _truth(name: str, table: OrchardTable) -> str:
-    if name in table.truth:
-        return "true"
-    return "related neighbour" if name in table.related else "false"
+def _truth(table: OrchardTable) -> dict[str, str]:
+    """What every column is in truth."""
+    true, related = set(table.truth), set(table.related)
+    return {
+        name: "true" if name in true else "related neighbour" if name in related else "false"
+        for name in table.feature_names
+    }
 
 
 def _performance(pipeline: Pipeline, lots: Any, table: OrchardTable) -> str:

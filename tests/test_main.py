@@ -68,7 +68,7 @@ def test_claim_performance_and_agreement_are_there(printed):
     sizes = re.search(r"columns chosen there: ([\d, ]+)", printed)[1].split(",")
     assert len(sizes) == 5
     assert "Cross-check of StabilitySelector: agreement" in printed
-    assert re.search(r"cvxpy +solved 5 \(CLARABEL optimal 5\)", printed)
+    assert re.search(r"cvxpy +solved 3 \(CLARABEL optimal 3\)", printed)
 
 
 def test_lines_fit_a_page(printed):
