@@ -41,7 +41,7 @@ class Permuted:
     def has_copy(self):
         return np.ones(self.n_features, dtype=bool)
 
-    def fit(self, X, *, covariates=None, sample_weight=None):
+    def fit(self, X, *, covariates=None, sample_weight=None, feature_groups=None):
         return Permuted(X.shape[1])
 
     def draw(self, X, y, generator, *, covariates=None, sample_weight=None):
@@ -155,6 +155,18 @@ def test_covariates_and_constant_columns_take_no_part():
     fine = check_exchangeability(GaussianModel(), X, 1, covariates=Z)
     assert not fine.violated
     assert fine.assumption()[1] == "checked and fine"
+
+
+def test_groups_are_swapped_as_a_whole():
+    """Copies of groups repeat their features' differences, which single swaps would notice."""
+    generator = spawn(72, 1)[0]
+    first = gaussian_rows(generator, 800, 6, 0.5)
+    X = np.hstack([first, first + 0.1 * generator.standard_normal((800, 6))])
+    labels = np.arange(12) % 6
+    fine = check_exchangeability(GaussianModel(), X, 2, feature_groups=labels)
+    assert not fine.violated
+    wrong = check_exchangeability(GaussianModel(np.eye(12)), X, 2, feature_groups=labels)
+    assert "dependence" in wrong.violated
 
 
 def test_impossible_checks_say_so():

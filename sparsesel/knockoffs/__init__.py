@@ -7,7 +7,9 @@ from sparsesel.knockoffs.copula import CopulaModel, FittedCopula
 from sparsesel.knockoffs.exchangeability import ExchangeabilityCheck, check_exchangeability
 from sparsesel.knockoffs.fixed_x import FittedFixedX, FixedXModel
 from sparsesel.knockoffs.gaussian import FittedGaussian, GaussianModel
+from sparsesel.knockoffs.indistinct import IndistinctFeatures, indistinct_features
 from sparsesel.knockoffs.low_rank import LowRankCovariance
+from sparsesel.knockoffs.models import FEATURE_MODELS
 from sparsesel.knockoffs.s_vectors import (
     S_VECTOR_METHODS,
     SVector,
@@ -18,6 +20,7 @@ from sparsesel.knockoffs.s_vectors import (
 )
 
 __all__ = [
+    "FEATURE_MODELS",
     "S_VECTOR_METHODS",
     "CopulaModel",
     "ExchangeabilityCheck",
@@ -26,12 +29,14 @@ __all__ = [
     "FittedGaussian",
     "FixedXModel",
     "GaussianModel",
+    "IndistinctFeatures",
     "LowRankCovariance",
     "PairedTable",
     "SVector",
     "SVectorStatus",
     "block_diagonal_s_vector",
     "check_exchangeability",
+    "indistinct_features",
     "s_vector",
     "solve_s_vector",
 ]

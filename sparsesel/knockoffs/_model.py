@@ -169,6 +169,12 @@ def condition(
     whole.
     """
     n_features = X.shape[1]
+    if feature_groups is not None and np.shape(feature_groups) != (n_features,):
+        raise ValueError(
+            f"{np.shape(feature_groups)} labels of groups were given for {n_features} features; "
+            "one label per feature is needed. Give features outside of any group labels of their "
+            "own."
+        )
     seen = weights > 0
     X, covariates, weights = X[seen], covariates[seen], weights[seen]
     precision = X.dtype if X.dtype == np.float32 else np.dtype(np.float64)

@@ -10,8 +10,10 @@ told that its data are centred.
                     MMSE covariance estimation", IEEE Trans. Signal Processing 58, equation 23
 "graphical_lasso"   sparse precision matrix, penalty by cross-validation (Friedman, Hastie and
                     Tibshirani 2008, Biostatistics 9)
-"factor"            maximum likelihood factor model; the number of factors is where the ratio of
-                    neighbouring eigenvalues is largest (Ahn and Horenstein 2013, Econometrica 81)
+"factor"            maximum likelihood factor model, with as many factors as there are eigenvalues
+                    beyond those of independent features (Johnstone 2001, "On the distribution of
+                    the largest eigenvalue in principal components analysis", Annals of Statistics
+                    29)
 
 The first two are kept as diagonal plus rank n where that is the smaller form (2 n < p), the last
 always.
@@ -30,7 +32,7 @@ from sparsesel.knockoffs.low_rank import LowRankCovariance
 
 Covariance = np.ndarray | LowRankCovariance
 
-# The eigenvalue ratio looks at no more factors than this.
+# A factor model has no more factors than this.
 _MOST_FACTORS = 50
 
 
@@ -117,18 +119,21 @@ def smaller_gram(rows: np.ndarray) -> np.ndarray:
 
 
 def number_of_factors(rows: np.ndarray) -> int:
-    """Where the ratio of neighbouring eigenvalues of the correlation matrix is largest.
+    """Eigenvalues of the correlation matrix beyond those of independent features.
 
-    The paper's mock eigenvalue (the mean of all over the log of their number) lets the answer be 0.
+    The largest eigenvalue of n rows of p independent features exceeds
+
+        (n^1/2 + p^1/2)^2 / n  +  0.98 (n^1/2 + p^1/2) (n^-1/2 + p^-1/2)^1/3 / n
+
+    in one table of twenty (Johnstone 2001, theorem 1.1, with the .95 quantile of the Tracy-Widom
+    law; for centred rows n - 1 stands for n).
     """
-    smaller = min(rows.shape)
-    values = np.linalg.eigvalsh(smaller_gram(rows))[::-1][: smaller - 1]
-    most = min(_MOST_FACTORS, (smaller - 1) // 2)
-    if most < 1:
-        return 0
-    padded = np.concatenate([[values.sum() / np.log(max(smaller, 3))], values])
-    tiny = np.finfo(np.float64).tiny
-    return int(np.argmax(padded[: most + 1] / np.maximum(padded[1 : most + 2], tiny)))
+    count, n_features = len(rows) - 1, rows.shape[1]
+    values = np.linalg.eigvalsh(smaller_gram(rows))[::-1] * len(rows) / count
+    total = np.sqrt(count) + np.sqrt(n_features)
+    spread = total * (1.0 / np.sqrt(count) + 1.0 / np.sqrt(n_features)) ** (1.0 / 3.0)
+    beyond = int(np.sum(values > (total**2 + 0.98 * spread) / count))
+    return min(beyond, _MOST_FACTORS, (min(rows.shape) - 1) // 2)
 
 
 Estimator = Callable[[np.ndarray], Covariance]

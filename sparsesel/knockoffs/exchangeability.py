@@ -76,6 +76,8 @@ class ExchangeabilityCheck:
         The statistics that say no.
     n_rows : int
         Held-out rows; 0 where the check was not possible.
+    level : float
+        Chance of a false alarm that was asked for.
     """
 
     z: np.ndarray
@@ -83,6 +85,7 @@ class ExchangeabilityCheck:
     p_value: float
     violated: tuple[str, ...]
     n_rows: int
+    level: float = 0.05
 
     def assumption(self) -> tuple[str, str, str]:
         """The result as (statement, state, detail)."""
@@ -90,7 +93,11 @@ class ExchangeabilityCheck:
         if self.n_rows == 0:
             return statement, UNCHECKED, f"fewer than {_FEWEST_ROWS} rows, or nothing to copy"
         if not self.violated:
-            return statement, HOLDS, f"{self.n_rows} held-out rows, p = {self.p_value:.2g}"
+            detail = f"{self.n_rows} held-out rows, p = {self.p_value:.2g}"
+            if self.p_value < self.level:
+                most = 100 * np.abs(self.loss[_LARGEST_LOSS > 0]).max()
+                detail += f", but no more than {most:.0f}% of the dependence is lost"
+            return statement, HOLDS, detail
         found = ", ".join(
             f"{name} (z = {self.z[i]:.1f}, {100 * self.loss[i]:.0f}% lost)"
             for i, name in enumerate(STATISTICS)
@@ -106,6 +113,7 @@ def check_exchangeability(
     *,
     covariates: np.ndarray | None = None,
     sample_weight: np.ndarray | None = None,
+    feature_groups: np.ndarray | None = None,
     level: float = 0.05,
 ) -> ExchangeabilityCheck:
     """Fit a model to half of the rows and test its copies on the other half.
@@ -122,6 +130,8 @@ def check_exchangeability(
         Columns that are conditioned on.
     sample_weight : ndarray of shape (n_rows,), default=None
         Weights for the fit; rows of weight 0 take no part.
+    feature_groups : ndarray of shape (n_features,), default=None
+        Labels of groups that are swapped as a whole.
     level : float, default=0.05
         Chance of a false alarm, in (0, 1).
 
@@ -155,19 +165,24 @@ def check_exchangeability(
     impossible = ExchangeabilityCheck(np.zeros(4), np.zeros(4), 1.0, (), 0)
     if len(rows) < _FEWEST_ROWS:
         return impossible
-    fitted = model.fit(X[fit], covariates=Z[fit], sample_weight=weights[fit])
-    conditioning = condition(X[fit], Z[fit], weights[fit] / weights[fit].sum())
+    fitted = model.fit(
+        X[fit], covariates=Z[fit], sample_weight=weights[fit], feature_groups=feature_groups
+    )
+    share = weights[fit] / weights[fit].sum()
+    conditioning = condition(X[fit], Z[fit], share, feature_groups)
     columns = np.flatnonzero(fitted.has_copy[conditioning.has_copy])
     if not len(columns):
         return impossible
     columns = draws.permutation(columns)[:_MOST_FEATURES]
+    labels = np.arange(X.shape[1]) if feature_groups is None else np.asarray(feature_groups)
+    units = np.unique(labels[conditioning.has_copy][columns], return_inverse=True)[1]
     held_out = X[test]
     features = conditioning.residuals(held_out, Z[test])[:, columns]
     pairs = []
     for _ in range(2):
         copies = fitted.draw(held_out, np.zeros(len(test)), draws, covariates=Z[test]).copies
         moved = conditioning.residuals(copies, Z[test])[:, columns]
-        swap = draws.random(features.shape) < 0.5
+        swap = (draws.random((len(test), units.max() + 1)) < 0.5)[:, units]
         pairs.append(_values(features, np.where(swap, moved, features)))
     before = pairs[0][0]
     after = np.stack([value for _, value in pairs])
@@ -217,4 +232,5 @@ def _judged(
     p_values = 2.0 * norm.sf(np.abs(z))
     no = (len(z) * p_values < level) & (np.abs(loss) >= _LARGEST_LOSS)
     violated = tuple(name for name, says_no in zip(STATISTICS, no, strict=True) if says_no)
-    return ExchangeabilityCheck(z, loss, float(min(1.0, len(z) * p_values.min())), violated, n_test)
+    p_value = float(min(1.0, len(z) * p_values.min()))
+    return ExchangeabilityCheck(z, loss, p_value, violated, n_test, level)

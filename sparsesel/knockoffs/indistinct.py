@@ -53,7 +53,7 @@ class IndistinctFeatures:
         ]
         detail = (
             f"{self.n_features} features have next to no power, in {len(self.clusters)} clusters "
-            f"such as {', '.join(shown)}; feature_groups of such clusters have"
+            f"such as {', '.join(shown)}; selected as feature_groups such clusters have power"
         )
         return statement, VIOLATED, detail
 
