@@ -6,10 +6,12 @@ from sparsesel.selectors._base import StatedProblem
 from sparsesel.selectors._columns import correlation_groups
 from sparsesel.selectors.adaptive import AdaptiveLassoSelector
 from sparsesel.selectors.fallback import NullModelFallback
+from sparsesel.selectors.knockoff import KnockoffSelector
 from sparsesel.selectors.stability import RandomizedLassoSelector, StabilitySelector
 
 __all__ = [
     "AdaptiveLassoSelector",
+    "KnockoffSelector",
     "NullModelFallback",
     "RandomizedLassoSelector",
     "StabilitySelector",
