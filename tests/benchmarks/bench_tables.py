@@ -44,12 +44,12 @@ def fill_autoregressive(X: NDArray[Any], seed: int) -> None:
     last: NDArray[np.float64] = generator.standard_normal(n)
     for start in range(0, p, width):
         drawn = innovation * generator.standard_normal((min(width, p - start), n))
-        columns: NDArray[np.float64]
-        columns, _ = lfilter(
+        filtered: Any = lfilter(
             [1.0], [1.0, -CORRELATION], drawn, axis=0, zi=CORRELATION * last[None, :]
         )
+        columns = filtered[0]
         X[:, start : start + len(columns)] = columns.T
-        last = np.array(columns[-1])
+        last = columns[-1]
 
 
 def _predictor(X: Any, seed: int) -> NDArray[np.float64]:

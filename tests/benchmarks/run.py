@@ -1,20 +1,22 @@
 """Speed, gaps and memory beside scikit-learn's: ``python tests/benchmarks/run.py``.
 
-Run from a checkout, with the package installed from it. Says what each case measured and what its goal is, and judges nothing: the exit code is 0. Cases are
-named in full or by their beginning (``halves``, ``path:200``); ``--list`` names them. Run it alone
-on a quiet machine, on Linux.
+To be run from a checkout that is installed, alone on a quiet machine, on Linux. It says what each
+case took and what its goal is, and judges nothing: the exit code is 0. Cases are named in full or
+by their beginning (``halves``, ``path:200``); ``--list`` names them.
 
 What holds for all cases: both sides have one BLAS thread; they take turns, and medians of the
 repeats are compared; our tolerance is the largest relative duality gap that the peer leaves, but
-never looser than its own criterion for the lasso; gaps of both sides are computed from their coefficients by the same formula;
-memory is private memory at its peak beyond what the table and this process held before; "x pass" is
-our time over one pass over the table at the measured bandwidth, "x products" over one gradient per
-problem and penalty at the measured rate of matrix products.
+never looser than its own criterion for the lasso; gaps of both sides are computed from their
+coefficients by the same formula; memory is private memory at its peak beyond what the table and
+this process held before; "x pass" is our time over one pass over the table at the measured
+bandwidth, "x products" over one gradient per problem and penalty at the measured rate of matrix
+products.
 """
 
 from __future__ import annotations
 
 import argparse
+import traceback
 from collections.abc import Callable, Iterator
 from functools import partial
 
@@ -92,10 +94,17 @@ def chosen_cases(wanted: list[str]) -> list[str]:
 
 
 def lines(names: list[str], options: Options, hardware: Hardware) -> Iterator[Line]:
-    """Measure case after case; nothing of one is in memory when the next begins."""
+    """Measure case after case; nothing of one is in memory when the next begins.
+
+    A case that fails is a line too: the others took too long to be lost.
+    """
     for name in names:
         give_memory_back()
-        yield from CASES[name](options, hardware)
+        try:
+            yield from CASES[name](options, hardware)
+        except Exception as error:
+            traceback.print_exc()
+            yield Line(name, notes=(f"FAILED: {error}",))
 
 
 def parsed(arguments: list[str] | None) -> argparse.Namespace:
