@@ -6,6 +6,7 @@ from sparsesel.claim import Claim
 from sparsesel.engine import PathResult, Status, penalized_path
 from sparsesel.selectors import (
     AdaptiveLassoSelector,
+    KnockoffSelector,
     NullModelFallback,
     RandomizedLassoSelector,
     StabilitySelector,
@@ -19,6 +20,7 @@ __all__ = [
     "AdaptiveLassoSelector",
     "Claim",
     "CrossCheckReport",
+    "KnockoffSelector",
     "NullModelFallback",
     "PathResult",
     "RandomizedLassoSelector",

@@ -15,6 +15,7 @@ from sklearn.linear_model import Ridge
 
 from sparsesel import (
     AdaptiveLassoSelector,
+    KnockoffSelector,
     RandomizedLassoSelector,
     StabilitySelector,
     cross_check,
@@ -50,6 +51,15 @@ FITS = {
     "adaptive, cv": (AdaptiveLassoSelector(covariates=[4]), {"sample_weight": WEIGHT}),
     "adaptive, one_se": (AdaptiveLassoSelector("one_se", cv=3), {"groups": GROUPS}),
     "adaptive, ebic": (AdaptiveLassoSelector("ebic", l1_ratio=0.8, gamma=2.0), {}),
+    "knockoffs": (KnockoffSelector(feature_model="gaussian", random_state=0), {}),
+    "knockoffs, entry": (
+        KnockoffSelector(feature_model="gaussian", importance="entry", random_state=0),
+        {"sample_weight": WEIGHT},
+    ),
+    "knockoffs, draws": (
+        KnockoffSelector(pfer=1.0, n_draws=3, covariates=[4], random_state=0),
+        {},
+    ),
     "lasso": (AdaptiveLassoSelector(0.1, gamma=0, penalty_weights={0: np.inf}), {}),
 }
 
@@ -124,6 +134,18 @@ def test_votes_that_nobody_cast_are_caught(attribute):
     assert not report.agrees and sum(not holds for holds in report.derived.values()) == 1
 
 
+def test_contrasts_and_lists_that_do_not_follow_are_caught():
+    selector, X, y = fitted(KnockoffSelector(0.5, plus=False, random_state=0))
+    assert selector.selected_.any()
+    honest = cross_check(selector, X, y)
+    assert honest.agrees and len(honest.derived) == 4
+    selector.contrast_ = -selector.contrast_
+    # So low that more copies are above it than the target allows.
+    selector.threshold_ = float(np.min(np.abs(selector._contrasts)))
+    selector.units_["selected"] = np.roll(selector.units_["selected"], 1)
+    assert not any(cross_check(selector, X, y).derived.values())
+
+
 def test_a_unit_that_is_claimed_without_votes_is_caught():
     selector, X, y = fitted(StabilitySelector(**HALVES))
     selector.units_["selected"] = np.roll(selector.units_["selected"], 1)
@@ -151,8 +173,9 @@ def test_a_penalty_that_its_rule_does_not_pick_is_caught(rule):
         RandomizedLassoSelector(**HALVES),
         AdaptiveLassoSelector(0.1, initial="ridge"),
         AdaptiveLassoSelector(0.1, gamma=0),
+        KnockoffSelector(random_state=0),
     ],
-    ids=["stability", "randomised", "adaptive", "lasso"],
+    ids=["stability", "randomised", "adaptive", "lasso", "knockoffs"],
 )
 def test_data_of_another_fit_are_refused(selector):
     selector, X, y = fitted(selector)

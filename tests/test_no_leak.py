@@ -28,7 +28,7 @@ FOLDS = StratifiedKFold(5)
 
 # The statistical tier repeats what the default one does, on more tables.
 each_number = pytest.mark.parametrize(
-    "n_tables", [100, pytest.param(500, marks=pytest.mark.statistical)]
+    "n_tables", [100, pytest.param(300, marks=pytest.mark.statistical)]
 )
 
 

@@ -35,7 +35,9 @@ from sklearn.utils.validation import check_is_fitted
 from sparsesel.engine.reference import ReferenceSolution, reference_solution
 from sparsesel.selectors import StatedProblem
 from sparsesel.selectors._base import BaseSparseSelector, FitInput
+from sparsesel.selectors._knockoff_filters import choose_filter
 from sparsesel.selectors._tuning import lowest, one_standard_error
+from sparsesel.selectors.knockoff import _FILTER
 from sparsesel.study._certificate import Audit, Certificate
 from sparsesel.tasks import draw_seed, spawn
 
@@ -66,7 +68,7 @@ class CrossCheckReport:
     seed : int
         The `seed_` from which the problems were restated.
     n_problems : int
-        Problems that the fit consists of.
+        Problems restated.
     n_columns : int
         Columns of the table of a problem; twice those of the fit with knockoffs.
     n_certified : int
@@ -269,6 +271,11 @@ def cross_check(
 
     Notes
     -----
+    Restated are: for stability selection and the randomized lasso the last problem of every half,
+    which is the one that decides who was in time; for the adaptive lasso the final fit and those
+    of the folds at its penalty; for knockoffs the problem that contrasts are read off, of at most
+    five draws.
+
     Agreement says that the numbers are right. Whether the assumptions of a claim hold for the data
     is another matter, on which `claim_` says what can be said.
 
@@ -444,6 +451,7 @@ def _derived(
     for attribute, derive in _DERIVATIONS.items():
         if hasattr(selector, attribute):
             found |= derive(selector, data, stated)
+            break
     units = np.asarray(selector.units_["selected"])
     named = set(np.asarray(selector.units_["unit"])[units])
     return found | {
@@ -541,4 +549,35 @@ def _held_out_loss(data: FitInput, final: StatedProblem, fold: StatedProblem) ->
     return float(weight @ rows / weight.sum())
 
 
-_DERIVATIONS = {"selection_probability_": _votes, "coef_": _coefficients}
+def _contrasts(selector: Any, data: FitInput, stated: list[StatedProblem]) -> dict[str, bool]:
+    """The list from the contrasts; that the restated draws have them is known by now."""
+    contrasts = selector._contrasts
+    mean = data.columns.over_columns(contrasts.mean(axis=0), np.nan)
+    rule = choose_filter(
+        selector.fdr, selector.plus, selector.pfer, selector.k_fwer, selector.n_draws
+    )
+    decision = rule.decide(contrasts, spawn(selector.seed_, 1, _FILTER)[0])
+    found = {
+        "the restated draws have their contrasts, and contrast_ is the mean of all": bool(
+            np.array_equal(mean, selector.contrast_, equal_nan=True)
+        ),
+        "the selected units are those that the filter takes from the contrasts": bool(
+            np.array_equal(decision.selected, selector.units_["selected"])
+        ),
+    }
+    if rule.key in ("knockoff", "knockoff+") and np.isfinite(selector.threshold_):
+        # Barber and Candès (2015), Definitions 3 and 4, as they are printed.
+        wins = np.sum(contrasts[0] >= selector.threshold_)
+        losses = np.sum(contrasts[0] <= -selector.threshold_)
+        share = (losses + (rule.key == "knockoff+")) / max(wins, 1)
+        found["the estimated share of false discoveries at threshold_ is at most fdr"] = bool(
+            share <= selector.fdr
+        )
+    return found
+
+
+_DERIVATIONS = {
+    "contrast_": _contrasts,
+    "coef_": _coefficients,
+    "selection_probability_": _votes,
+}
