@@ -169,13 +169,24 @@ def cold_start(options: Options, _hardware: Hardware) -> Iterator[Line]:
     yield loading.line("cold:load", "<= 0.6 s", "full cache")
 
 
+class _Kept:
+    """Work whose last answer is kept."""
+
+    def __init__(self, work: Callable[[], dict[str, float]]) -> None:
+        self._work = work
+        self.last: dict[str, float] = {}
+
+    def __call__(self) -> None:
+        self.last = self._work()
+
+
 def _first_runs(start: Callable[[], dict[str, float]], repeats: int, retries: int) -> _FirstRun:
     """Repeat a fresh interpreter; of one that was disturbed only the last counts."""
     reports, n_disturbed = [], 0
     for _ in range(repeats):
-        tried: list[dict[str, float]] = []
-        _, disturbed = time_undisturbed(lambda kept=tried: kept.append(start()), retries)
-        reports.append(tried[-1])
+        tried = _Kept(start)
+        _, disturbed = time_undisturbed(tried, retries)
+        reports.append(tried.last)
         n_disturbed += disturbed
     return _FirstRun(reports, n_disturbed)
 

@@ -41,7 +41,7 @@ def fill_autoregressive(X: NDArray[Any], seed: int) -> None:
     generator = np.random.default_rng([seed, n, p])
     width = max(1, _BLOCK_BYTES // (8 * n))
     innovation = np.sqrt(1.0 - CORRELATION**2)
-    last: NDArray[np.float64] = generator.standard_normal(n)
+    last: Any = generator.standard_normal(n)
     for start in range(0, p, width):
         drawn = innovation * generator.standard_normal((min(width, p - start), n))
         filtered: Any = lfilter(
