@@ -11,6 +11,7 @@ import json
 import sys
 import time
 import warnings
+from typing import Any
 
 
 def import_seconds() -> dict[str, float]:
@@ -55,6 +56,23 @@ def fit_everything() -> None:
             *(KnockoffSelector(s_vector=rule) for rule in ("mvr", "max_entropy", "sdp")),
         ):
             selector.set_params(random_state=0).fit(X, y)
+    fit_wide(generator)
+
+
+def fit_wide(generator: Any) -> None:
+    """What only tables of many columns reach: low-rank covariances, columns that leave again."""
+    import numpy as np
+
+    from sparsesel.engine import penalized_path
+    from sparsesel.knockoffs import LowRankCovariance
+    from sparsesel.knockoffs.s_vectors import s_vector
+
+    wide = generator.standard_normal((40, 400))
+    wide = wide[:, :1] + 0.3 * wide
+    y = wide[:, :20].sum(axis=1) + np.abs(wide[:, 20])
+    penalized_path(wide, y, alphas=50, l1_ratio=1.0)
+    for rule in ("mvr", "max_entropy", "sdp"):
+        s_vector(LowRankCovariance(np.full(60, 0.5), np.full((60, 1), np.sqrt(0.5))), rule)
 
 
 def run_seconds() -> dict[str, float]:
