@@ -72,7 +72,7 @@ def fit_wide(generator: Any) -> None:
     y = wide[:, :20].sum(axis=1) + np.abs(wide[:, 20])
     penalized_path(wide, y, alphas=50, l1_ratio=1.0)
     for rule in ("mvr", "max_entropy", "sdp"):
-        s_vector(LowRankCovariance(np.full(60, 0.5), np.full((60, 1), np.sqrt(0.5))), rule)
+        s_vector(LowRankCovariance(np.full(600, 0.5), np.full((600, 1), np.sqrt(0.5))), rule)
 
 
 def run_seconds() -> dict[str, float]:
