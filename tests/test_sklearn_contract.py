@@ -33,6 +33,7 @@ from sklearn.utils.estimator_checks import estimator_checks_generator, parametri
 
 from sparsesel.selectors import (
     AdaptiveLassoSelector,
+    KnockoffSelector,
     NullModelFallback,
     RandomizedLassoSelector,
     StabilitySelector,
@@ -50,6 +51,10 @@ SELECTORS = [
     StabilitySelector(n_pairs=3, estimator=Lasso(0.01)),
     RandomizedLassoSelector(n_pairs=5),
     RandomizedLassoSelector(n_pairs=6, weakness=0.7, pfer=3, l1_ratio=0.9),
+    KnockoffSelector(),
+    KnockoffSelector(pfer=4, n_draws=3, importance="entry"),
+    KnockoffSelector(0.5, plus=False, s_vector="sdp", importance="marginal"),
+    KnockoffSelector(k_fwer=(1, 0.5), importance="ridge", feature_groups="correlation"),
 ]
 FALLBACKS = [NullModelFallback(LogisticRegression()), NullModelFallback(Ridge())]
 
@@ -58,6 +63,7 @@ EACH = [
     AdaptiveLassoSelector("ebic"),
     StabilitySelector(n_pairs=6, features_per_fit=3, pfer=10, random_state=0),
     RandomizedLassoSelector(n_pairs=6, features_per_fit=3, pfer=10, random_state=0),
+    KnockoffSelector(pfer=2, n_draws=3, random_state=0),
 ]
 each_selector = pytest.mark.parametrize(
     "selector", EACH, ids=lambda selector: type(selector).__name__
@@ -82,6 +88,15 @@ def expected_failures(estimator):
                 "is refused, and not for the number of features"
             ),
         }
+    if isinstance(estimator, KnockoffSelector):
+        repeated = (
+            "every row has a copy of its own: two equal rows are two draws, a row of weight 2 is "
+            "one. Row by row it holds for a weight of zero, see test_selectors_knockoff"
+        )
+        return {
+            "check_sample_weight_equivalence_on_dense_data": repeated,
+            "check_sample_weight_equivalence_on_sparse_data": repeated,
+        }
     if isinstance(estimator, NullModelFallback):
         return {
             "check_estimators_empty_data_messages": (
@@ -100,6 +115,7 @@ def common_checks():
 
 @pytest.mark.filterwarnings("ignore:y has .* distinct whole numbers:UserWarning")
 @pytest.mark.filterwarnings("ignore:No features were selected:UserWarning")
+@pytest.mark.filterwarnings("ignore:There (is|are) . candidate feature:UserWarning")
 @common_checks()
 def test_common_check(estimator, check):
     check(estimator)
@@ -152,6 +168,7 @@ NOT_COMMON = [
 # The checks of set_output fit to a frame and transform an array, and the other way round.
 @pytest.mark.filterwarnings("ignore:X (has|does not have valid) feature names:UserWarning")
 @pytest.mark.filterwarnings("ignore:No features were selected:UserWarning")
+@pytest.mark.filterwarnings("ignore:There (is|are) . candidate feature:UserWarning")
 @pytest.mark.parametrize("name", NOT_COMMON)
 @pytest.mark.parametrize("estimator", SELECTORS, ids=lambda estimator: str(estimator)[:60])
 def test_check_that_is_not_common(estimator, name):
@@ -180,6 +197,11 @@ def make_data(n=60, p=8, seed=0):
 
 def fresh(selector, **parameters):
     return clone(selector).set_params(**parameters)
+
+
+def groups_for(selector, n, size):
+    """Groups of a few rows; of one where the outcome, which varies, may not vary within them."""
+    return np.arange(n) // (1 if isinstance(selector, KnockoffSelector) else size)
 
 
 # --- parameters and attributes ----------------------------------------------------------------
@@ -227,7 +249,7 @@ def test_clone_and_pickle(selector):
 @each_selector
 def test_fit_does_not_touch_its_arguments(selector):
     X, y = make_data()
-    weight, groups = np.ones(60), np.arange(60) // 2
+    weight, groups = np.ones(60), groups_for(selector, 60, 2)
     copies = [array.copy() for array in (X, y, weight, groups)]
     for array in (X, y, weight, groups):
         array.flags.writeable = False
@@ -297,8 +319,10 @@ def test_names_survive_a_column_transformer(selector):
 @each_selector
 def test_search_over_a_parameter_of_the_selector(selector):
     X, y = make_data()
-    name = "alpha" if isinstance(selector, AdaptiveLassoSelector) else "features_per_fit"
-    values = [0.01, 0.5] if name == "alpha" else [1, 3]
+    name, values = {
+        AdaptiveLassoSelector: ("alpha", [0.01, 0.5]),
+        KnockoffSelector: ("pfer", [1, 4]),
+    }.get(type(selector), ("features_per_fit", [1, 3]))
     pipeline = make_pipeline(StandardScaler(), fresh(selector), NullModelFallback(Ridge()))
     step = type(selector).__name__.lower()
     search = GridSearchCV(pipeline, {f"{step}__{name}": values}, cv=3).fit(X, y)
@@ -327,7 +351,10 @@ def test_as_many_columns_as_rows(selector):
         y,
         cv=GroupKFold(4),
         groups=np.arange(40) // 4,
-        params={f"{step}__groups": np.arange(40) // 4, f"{step}__sample_weight": np.ones(40)},
+        params={
+            f"{step}__groups": groups_for(selector, 40, 4),
+            f"{step}__sample_weight": np.ones(40),
+        },
         return_estimator=True,
     )
     for fitted in result["estimator"]:
@@ -439,6 +466,8 @@ def test_the_same_bits_for_any_workers(selector, loss):
     y = y if loss == "squared_error" else y > 0
     if isinstance(selector, AdaptiveLassoSelector):
         selector, measure = AdaptiveLassoSelector("cv"), "coef_"
+    elif isinstance(selector, KnockoffSelector):
+        measure = "contrast_"
     else:
         selector, measure = fresh(selector, n_pairs=30), "selection_probability_"
     one = getattr(fresh(selector).fit(X, y), measure)

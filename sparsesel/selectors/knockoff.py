@@ -649,7 +649,8 @@ def _warn_if_hopeless(rule: KnockoffFilter, data: FitInput) -> None:
     if count >= rule.least:
         return
     warnings.warn(
-        f"There are {count} candidate {data.columns.unit}s, and a list at fdr={rule.target:g} "
+        f"There {'is' if count == 1 else 'are'} {count} candidate {data.columns.unit}"
+        f"{'' if count == 1 else 's'}, and a list at fdr={rule.target:g} "
         f"holds at least {rule.least} of them or is empty"
         f"{', with several draws' if rule.key == 'e_values' else ''}: nothing can be selected, "
         "whatever the outcome. Give more candidates, raise fdr, or ask for short lists by "
