@@ -28,6 +28,7 @@ from sklearn.exceptions import ConvergenceWarning
 
 from sparsesel.engine.chunk import open_chunk
 from sparsesel.engine.design import DesignMatrix, FloatArray
+from sparsesel.engine.inputs import check_bank, check_limits
 from sparsesel.engine.losses import LOSSES
 from sparsesel.engine.status import Status
 from sparsesel.engine.walk import Walk
@@ -205,15 +206,16 @@ def solve_bank(
     Raises
     ------
     ValueError
-        If the arrays of the bank disagree, the response does not suit the loss, or the
-        unpenalised columns separate the classes.
+        If the bank has no answer, as ``inputs.check_bank`` says, the response does not suit
+        the loss, or the unpenalised columns separate the classes.
 
     References
     ----------
     The module's head states the objective; ``certificate`` the gap.
     """
     keep = Keep(coefficients=True) if keep is None else keep
-    LOSSES[problems.loss].check_response(np.asarray(problems.response))
+    check_limits(tol, max_iter, alpha_min_ratio)
+    check_bank(design, problems, alphas, keep)
     options = _Options(alpha_min_ratio, tol, max_iter)
     width = _CHUNK if problems.l1_ratio == 1.0 else _CHUNK_ELASTIC
     items = [
@@ -221,8 +223,8 @@ def solve_bank(
         for chosen in (slice(start, start + width) for start in range(0, problems.count, width))
     ]
     if problems.sample_weight is not None:
-        counting = np.atleast_2d(problems.sample_weight).any(axis=0)
-        design = design.counting(counting)
+        counting = (np.atleast_2d(problems.sample_weight) > 0.0).any(axis=0)
+        design = design.counting(np.asarray(counting))
     solve = functools.partial(_solve_chunk, design, options)
     return _joined(run_tasks(solve, items, settings))
 

@@ -2,18 +2,16 @@
 
 from __future__ import annotations
 
-import numbers
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy import sparse
-from sklearn.utils.validation import check_array, check_consistent_length, column_or_1d
 
 from sparsesel.engine.bank import Problems, solve_bank, warn_failures
 from sparsesel.engine.design import FloatArray, as_design
-from sparsesel.engine.losses import LOSSES
+from sparsesel.engine.inputs import as_grid, as_table, as_vector, check_settings
 
 
 @dataclass(frozen=True)
@@ -74,9 +72,10 @@ def penalized_path(
     ----------
     X : array or sparse matrix of shape (n, p)
         float32 or float64, dense in either order, a memory map, or sparse (CSC as it is,
-        other formats converted). Finite.
+        other formats converted); data frames, and integers, which are converted too.
+        Finite, the largest absolute value of every column 0 or from 1e-100 to 1e100.
     y : array of shape (n,)
-        Numbers; 0 and 1 for the log loss.
+        Numbers of the same magnitudes; 0 and 1 for the log loss.
     loss : {"squared_error", "log_loss"}, default="squared_error"
     alphas : int or array of shape (L,), default=100
         How many points of a geometric grid from the smallest penalty with an empty model
@@ -106,9 +105,10 @@ def penalized_path(
     Raises
     ------
     ValueError
-        If a value is not finite, shapes disagree, a weight is negative, all sample weights
-        are zero, ``alphas`` is not positive and decreasing, the log loss is given one class
-        or other values than 0 and 1, or unpenalised columns separate the classes.
+        If a value is not a real number, not finite or of a magnitude whose products leave
+        double precision, shapes disagree, a weight is negative, all sample weights are zero,
+        ``alphas`` is not positive and decreasing, the log loss is given one class or other
+        values than 0 and 1, or unpenalised columns separate the classes.
 
     Warns
     -----
@@ -130,29 +130,20 @@ def penalized_path(
     array([[1. , 0. ],
            [1.9, 0.4]])
     """
-    _check_options(loss, l1_ratio, tol, max_iter)
-    X = check_array(
-        X,
-        accept_sparse="csc",
-        dtype=(np.float64, np.float32),
-        input_name="X",
-        accept_large_sparse=True,
-    )
-    n, p = X.shape
-    y = _numbers(y, "y", n)
-    check_consistent_length(X, y)
+    check_settings(loss, l1_ratio, fit_intercept, standardize)
+    table = as_table(X)
+    n, p = table.shape
     problems = Problems(
         loss=loss,
-        response=y,
-        sample_weight=_weights(sample_weight, n),
-        penalty_weights=_penalty_weights(penalty_weights, p),
-        offset=None if offset is None else _numbers(offset, "offset", n),
+        response=as_vector(y, "y", n),
+        sample_weight=_optional(sample_weight, "sample_weight", n),
+        penalty_weights=_optional(penalty_weights, "penalty_weights", p, "column"),
+        offset=_optional(offset, "offset", n),
         l1_ratio=float(l1_ratio),
         fit_intercept=bool(fit_intercept),
         standardize=bool(standardize),
     )
-    grid = _grid(alphas)
-    result = solve_bank(as_design(X), problems, grid, tol=tol, max_iter=max_iter)
+    result = solve_bank(as_design(table), problems, as_grid(alphas), tol=tol, max_iter=max_iter)
     warn_failures(result, tol)
     assert result.coef is not None
     return PathResult(
@@ -165,81 +156,7 @@ def penalized_path(
     )
 
 
-def _check_options(loss: str, l1_ratio: float, tol: float, max_iter: int) -> None:
-    if loss not in LOSSES:
-        raise ValueError(
-            f"loss={loss!r} is not known; allowed are {sorted(LOSSES)}. Pass one of these."
-        )
-    if not (isinstance(l1_ratio, numbers.Real) and 0.0 < l1_ratio <= 1.0):
-        raise ValueError(
-            f"l1_ratio={l1_ratio!r} is outside (0, 1]. Pass 1 for the lasso or a value between 0 "
-            "and 1 for the elastic net; for ridge regression use sklearn.linear_model.Ridge."
-        )
-    if not (isinstance(tol, numbers.Real) and 0.0 < tol < 1.0):
-        raise ValueError(
-            f"tol={tol!r} is outside (0, 1): it is a relative duality gap. Pass a value such as "
-            "1e-7."
-        )
-    if not (isinstance(max_iter, numbers.Integral) and max_iter >= 1):
-        raise ValueError(
-            f"max_iter={max_iter!r} is not a positive integer. Pass how many coordinate sweeps "
-            "one penalty may cost, such as 10000."
-        )
-
-
-def _numbers(values: ArrayLike, name: str, length: int) -> FloatArray:
-    checked: FloatArray = column_or_1d(
-        check_array(values, ensure_2d=False, dtype=np.float64, input_name=name), warn=False
-    )
-    if checked.size != length:
-        raise ValueError(
-            f"{name} has {checked.size} values and X has {length} rows; they must match. Pass one "
-            f"value of {name} per row of X."
-        )
-    return checked
-
-
-def _weights(sample_weight: ArrayLike | None, length: int) -> FloatArray | None:
-    if sample_weight is None:
-        return None
-    values = _numbers(sample_weight, "sample_weight", length)
-    if (values < 0.0).any() or not values.sum() > 0.0:
-        raise ValueError(
-            f"sample_weight holds {np.count_nonzero(values < 0.0)} negative values and sums to "
-            f"{values.sum():g}; weights must not be negative and must not all be zero. Drop the "
-            "rows that should not count, or give them weight 0."
-        )
-    return values
-
-
-def _penalty_weights(penalty_weights: ArrayLike | None, length: int) -> FloatArray | None:
-    if penalty_weights is None:
-        return None
-    values = np.asarray(penalty_weights, dtype=np.float64)
-    if values.shape != (length,) or np.isnan(values).any() or (values < 0.0).any():
-        raise ValueError(
-            f"penalty_weights has shape {values.shape} and holds "
-            f"{np.count_nonzero(~(values >= 0.0))} values that are negative or NaN; allowed are "
-            f"{length} values, one per column, from 0 (unpenalised) to inf (left out). Pass None "
-            "to penalise all columns alike."
-        )
-    return values
-
-
-def _grid(alphas: int | ArrayLike) -> int | FloatArray:
-    if isinstance(alphas, numbers.Integral) and not isinstance(alphas, bool):
-        if alphas < 1:
-            raise ValueError(
-                f"alphas={alphas} asks for no grid point; allowed is a count of at least 1, or "
-                "the penalties themselves. Pass a positive integer."
-            )
-        return int(alphas)
-    values = np.atleast_1d(np.asarray(alphas, dtype=np.float64))
-    decreasing = values.ndim == 1 and values.size > 0 and bool((np.diff(values) < 0.0).all())
-    if not (decreasing and np.isfinite(values).all() and (values > 0.0).all()):
-        raise ValueError(
-            f"alphas={values} is not a list of positive, finite, strictly decreasing penalties. "
-            "Sort it from large to small and drop repeats and zeros; a column that should carry "
-            "no penalty gets penalty_weights 0."
-        )
-    return values
+def _optional(
+    values: ArrayLike | None, name: str, length: int, axis: str = "row"
+) -> FloatArray | None:
+    return None if values is None else as_vector(values, name, length, axis)
