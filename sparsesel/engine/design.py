@@ -192,6 +192,25 @@ class SparseDesign(DesignMatrix):
     def _dense(self, columns: slice | IntArray) -> FloatArray:
         return self.table[:, columns].toarray().astype(np.float64, copy=False)
 
+    @cached_property
+    def _extremes(self) -> tuple[FloatArray, FloatArray]:
+        if self._rows is not None:
+            return super()._extremes
+        table = self.table
+        centres, largest = np.empty(self.n_columns), np.empty(self.n_columns)
+        screening.sparse_extremes(read_only(table.data), read_only(table.indptr), centres, largest)
+        return centres / self.n_rows, largest
+
+    def moments(self, weights: FloatArray) -> Moments:
+        """Weighted means and standard deviations of every column, one row per problem."""
+        table, shape = self.table, (weights.shape[0], self.n_columns)
+        mean, scale = np.empty(shape), np.empty(shape)
+        screening.sparse_moments(
+            read_only(table.data), read_only(table.indices), read_only(table.indptr), weights,
+            mean, scale,
+        )  # fmt: skip
+        return Moments(mean, scale)
+
     def correlate(self, rows: FloatArray) -> FloatArray:
         return np.ascontiguousarray((self.table.T @ np.ascontiguousarray(rows.T)).T)
 

@@ -28,6 +28,8 @@ from sparsesel.engine._jit import exact_kernel, kernel
 # double-precision sums over rows.
 _SINGLE = 1.2e-7
 _DOUBLE = 1e-10
+# A unit in the last place of double precision.
+_UNIT = 2.3e-16
 # Lift of the normal equations: kept residuals are nearly parallel late in a path.
 _RIDGE = 1e-14
 # Columns looked at in one vectorised go before any of them is named.
@@ -290,3 +292,44 @@ def sparse_dots(problems, data, indices, indptr, weights, residual, found, total
             for place in range(indptr[j], indptr[j + 1]):
                 total += data[place] * weighted[indices[place]]
             values[b, position] = total
+
+
+@kernel
+def sparse_extremes(data, indptr, centres, largest):
+    """Sums of the stored entries of every CSC column, and their largest absolute value."""
+    for j in range(centres.size):
+        total = 0.0
+        most = 0.0
+        for place in range(indptr[j], indptr[j + 1]):
+            total += data[place]
+            # Phrased so that a NaN is kept.
+            most = most if abs(data[place]) <= most else abs(data[place])
+        centres[j] = total
+        largest[j] = most
+
+
+@kernel
+def sparse_moments(data, indices, indptr, weights, mean, scale):
+    """Weighted means and standard deviations of every CSC column, two-pass about the mean.
+
+    The entries that are not stored are zeros: they carry the rest of the weight, which sums
+    to one.
+    """
+    for b in range(weights.shape[0]):
+        for j in range(indptr.size - 1):
+            total = 0.0
+            stored = 0.0
+            for place in range(indptr[j], indptr[j + 1]):
+                weight = weights[b, indices[place]]
+                total += weight * data[place]
+                stored += weight
+            rest = 1.0 - stored
+            # What rounding alone leaves of a column stored in full is not weight.
+            if rest <= _UNIT * (indptr[j + 1] - indptr[j]):
+                rest = 0.0
+            variance = rest * total * total
+            for place in range(indptr[j], indptr[j + 1]):
+                away = data[place] - total
+                variance += weights[b, indices[place]] * away * away
+            mean[b, j] = total
+            scale[b, j] = np.sqrt(variance)
