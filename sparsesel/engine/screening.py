@@ -294,7 +294,7 @@ def sparse_dots(problems, data, indices, indptr, weights, residual, found, total
             values[b, position] = total
 
 
-@kernel
+@exact_kernel
 def sparse_extremes(data, indptr, centres, largest):
     """Sums of the stored entries of every CSC column, and their largest absolute value."""
     for j in range(centres.size):
@@ -302,8 +302,9 @@ def sparse_extremes(data, indptr, centres, largest):
         most = 0.0
         for place in range(indptr[j], indptr[j + 1]):
             total += data[place]
-            # Phrased so that a NaN is kept.
-            most = most if abs(data[place]) <= most else abs(data[place])
+            # Once a NaN, always a NaN: no comparison with it is true.
+            if not (abs(data[place]) <= most or most != most):
+                most = abs(data[place])
         centres[j] = total
         largest[j] = most
 
