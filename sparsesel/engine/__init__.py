@@ -5,13 +5,12 @@ from __future__ import annotations
 from sparsesel.engine.bank import (
     ENGINE_FORMAT,
     BankResult,
-    Keep,
-    Problems,
     solve_bank,
     warn_failures,
 )
 from sparsesel.engine.design import DesignMatrix, as_design
 from sparsesel.engine.path import PathResult, penalized_path
+from sparsesel.engine.problems import Keep, Problems
 from sparsesel.engine.status import Status
 
 __all__ = [

@@ -11,18 +11,14 @@ product for all that need one, and the pool of gathered columns.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from sparsesel.engine.basis import Basis, unpenalised_basis
 from sparsesel.engine.design import DesignMatrix, FloatArray, IntArray, Moments
-
-if TYPE_CHECKING:
-    from sparsesel.engine.bank import Problems
-    from sparsesel.engine.losses import LogLoss, SquaredError
-
+from sparsesel.engine.problems import Problems
 
 # Residuals with known gradients that are kept per problem.
 _KEPT = 3
@@ -187,9 +183,40 @@ class Chunk:
     load: FloatArray = field(default_factory=lambda: np.empty((0, 0)))
 
 
-def open_chunk(
-    design: DesignMatrix, problems: Problems, loss: SquaredError | LogLoss, max_iter: int
-) -> Chunk:
+class Loss(Protocol):
+    """What a loss does for a chunk; ``losses`` holds them."""
+
+    name: str
+    #: Whether Gram matrices stay the same along the path, and are kept for every problem.
+    keeps_gram: bool
+
+    def check_response(self, response: FloatArray) -> None:
+        """Refuse responses that the loss has no value for."""
+
+    def start(self, chunk: Chunk) -> None:
+        """Fit the null models: residuals, loads and null objectives."""
+
+    def extend(self, chunk: Chunk, problems: IntArray) -> None:
+        """Take in columns that joined the working sets."""
+
+    def solve(
+        self, chunk: Chunk, problems: IntArray, alpha: FloatArray, target: FloatArray
+    ) -> None:
+        """Solve the working sets of the named problems to these absolute gaps."""
+
+    def certify(
+        self, chunk: Chunk, problems: IntArray, alpha: FloatArray, outside: Outside
+    ) -> FloatArray:
+        """Relative gaps (B,), those of the named problems written."""
+
+    def basis_loads(self, chunk: Chunk) -> FloatArray:
+        """Coordinates of every problem on its basis (B, k)."""
+
+    def row_losses(self, chunk: Chunk, problems: IntArray) -> FloatArray:
+        """The loss of every row (problems.size, n)."""
+
+
+def open_chunk(design: DesignMatrix, problems: Problems, loss: Loss, max_iter: int) -> Chunk:
     """State the chunk's problems in full and start them at their null models."""
     n_problems, n, p = problems.count, design.n_rows, design.n_columns
     weights = _rows(_one_if_none(problems.sample_weight), n_problems, n)

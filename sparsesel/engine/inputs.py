@@ -18,7 +18,7 @@ too: zero times NaN is not zero.
 from __future__ import annotations
 
 import numbers
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -26,9 +26,7 @@ from scipy import sparse
 
 from sparsesel.engine.design import DesignMatrix, FloatArray
 from sparsesel.engine.losses import LOSSES
-
-if TYPE_CHECKING:
-    from sparsesel.engine.bank import Keep, Problems
+from sparsesel.engine.problems import Keep, Problems
 
 _SMALLEST, _LARGEST = 1e-100, 1e100
 # Above the largest penalty that empties a model within these, and twice it is still finite.

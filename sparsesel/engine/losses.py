@@ -10,16 +10,12 @@ one class here, with its kernels, and one line in ``LOSSES``.
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
-
 import numpy as np
 from numpy.typing import NDArray
 
 from sparsesel.engine import certificate, kernels
+from sparsesel.engine.chunk import Chunk, Loss, Outside
 from sparsesel.engine.design import FloatArray
-
-if TYPE_CHECKING:
-    from sparsesel.engine.chunk import Chunk, Outside
 
 # A null objective below this share of the response's mean square is rounding error.
 _NOTHING_LEFT = 1e-24
@@ -200,4 +196,4 @@ class LogLoss:
         return np.log1p(np.exp(-np.abs(margin))) + np.maximum(-margin, 0.0)
 
 
-LOSSES = {loss.name: loss for loss in (SquaredError(), LogLoss())}
+LOSSES: dict[str, Loss] = {loss.name: loss for loss in (SquaredError(), LogLoss())}

@@ -9,9 +9,10 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy import sparse
 
-from sparsesel.engine.bank import Problems, solve_bank, warn_failures
+from sparsesel.engine.bank import solve_bank, warn_failures
 from sparsesel.engine.design import FloatArray, as_design
 from sparsesel.engine.inputs import as_grid, as_table, as_vector, check_settings
+from sparsesel.engine.problems import Problems
 
 
 @dataclass(frozen=True)

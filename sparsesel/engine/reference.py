@@ -333,10 +333,12 @@ def reference_path(
 
     Parameters
     ----------
-    X, y, loss, l1_ratio, penalty_weights, sample_weight, offset, fit_intercept, standardize
+    X, y, loss
         As in `reference_solution`.
     alphas : array-like of shape (L,)
         The penalties, each at least 0, in any order. Every one is solved from scratch.
+    l1_ratio, penalty_weights, sample_weight, offset, fit_intercept, standardize
+        As in `reference_solution`.
 
     Returns
     -------

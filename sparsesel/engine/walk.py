@@ -17,20 +17,15 @@ The strong rule only proposes.  The certificate decides.
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
-
 import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
 
 from sparsesel.engine import kernels, screening
-from sparsesel.engine.chunk import Chunk, Outside, keep_gradients
+from sparsesel.engine.chunk import Chunk, Loss, Outside, keep_gradients
 from sparsesel.engine.design import FloatArray, IntArray
+from sparsesel.engine.problems import Keep
 from sparsesel.engine.status import Status
-
-if TYPE_CHECKING:
-    from sparsesel.engine.bank import Keep
-    from sparsesel.engine.losses import LogLoss, SquaredError
 
 # Columns proposed to a working set at once: this part of its support, at least so many.
 _PROPOSED_SHARE = 4
@@ -52,7 +47,7 @@ class Walk:
     """One chunk on its way: what is kept, and who is finished."""
 
     def __init__(
-        self, chunk: Chunk, loss: SquaredError | LogLoss, alphas: FloatArray, keep: Keep, tol: float
+        self, chunk: Chunk, loss: Loss, alphas: FloatArray, keep: Keep, tol: float
     ) -> None:
         self.chunk, self.loss, self.alphas, self.keep, self.tol = chunk, loss, alphas, keep, tol
         shape, p = alphas.shape, chunk.design.n_columns
