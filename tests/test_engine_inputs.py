@@ -55,7 +55,14 @@ class TestTable:
             (3.0, (r"X has shape \(\)", "two axes", "one row per sample")),
             (np.ones(30), (r"X has shape \(30,\)", "two axes", r"X.reshape\(-1, 1\)")),
             (np.ones((2, 30, 6)), (r"X has shape \(2, 30, 6\)", "two axes", "one row per")),
-            (sp.coo_array(np.arange(30.0)), (r"X has shape \(30,\)", "two axes", "one row per")),
+            pytest.param(
+                sp.coo_array(np.arange(30.0)),
+                (r"X has shape \(30,\)", "two axes", "one row per"),
+                marks=pytest.mark.skipif(
+                    sp.coo_array(np.arange(30.0)).ndim == 2,
+                    reason="scipy before 1.13 makes this a table of one row",
+                ),
+            ),
             ([[1, 2], [3]], ("X cannot be made an array", "equal length", "Check that all rows")),
             ("abc", ("X holds text", "real numbers", "Turn them")),
             (np.full((N, P), "1"), ("X holds text", "real numbers", "Turn them")),
@@ -143,14 +150,14 @@ class TestTable:
     @pytest.mark.parametrize(
         ("change", "why"),
         [
-            (("csc", 0, 7, N), f"indices must be < {N}"),
-            (("csr", 0, 7, P), f"indices must be < {P}"),
-            (("csc", 0, 7, -1), "indices must be >= 0"),
-            (("csr", 1, 2, 0), "indptr must be a non-decreasing"),
+            (("csc", 0, 7, N), f"must be < {N}"),
+            (("csr", 0, 7, P), f"must be < {P}"),
+            (("csc", 0, 7, -1), "must be >= 0"),
+            (("csr", 1, 2, 0), "non-decreasing"),
         ],
     )
     def test_sparse_tables_whose_indices_lead_outside(self, change, why):
-        message = r"indices contradict its shape \(30, 6\) \("
+        message = r"indices contradict its shape \(30, 6\) \(.*"
         with refused(message + why, "every index must name a row and a column", "Build it again"):
             call(X=self.sparse(change))
 
@@ -190,6 +197,9 @@ class TestTable:
 
     @pytest.mark.parametrize("dtype", ["Float64", "Int64", pd.SparseDtype("float64", 0.0)])
     def test_data_frames_of_extension_types(self, dtype):
+        if isinstance(dtype, pd.SparseDtype):
+            # pandas 3 refuses to build sparse matrices with the oldest scipy that we support.
+            pytest.importorskip("scipy", minversion="1.14.1")
         X = pd.DataFrame(np.rint(10 * table())).astype(dtype)
         taken = as_table(X)
         assert sp.issparse(taken) == isinstance(dtype, pd.SparseDtype)

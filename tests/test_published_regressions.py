@@ -492,7 +492,7 @@ class TestAdaptiveLasso:
             generator = np.random.default_rng(stream)
             X = generator.standard_normal((n, 4)) @ factor.T
             y = X @ self.BETA + sigma * generator.standard_normal(n)
-            initial = np.abs(np.linalg.lstsq(X, y)[0])
+            initial = np.abs(np.linalg.lstsq(X, y, rcond=None)[0])
             weights = np.array([(initial.max() / initial) ** gamma for gamma in self.GAMMAS])
             for which, supports in enumerate(self.supports_by_segment(X, y, weights)):
                 hits[which] += (supports == (self.BETA != 0)).all(axis=1).any()

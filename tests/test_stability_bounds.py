@@ -156,6 +156,8 @@ def optimised_tail(mean, position, points, r, generator):
     return best
 
 
+# Older versions of the optimiser step a rounding error over a bound, and say so.
+@pytest.mark.filterwarnings("ignore:Values in x were outside bounds:RuntimeWarning")
 @pytest.mark.parametrize(
     ("mean", "position", "points", "r"),
     [(0.8, 5, 8, -1 / 2), (1.3, 3, 6, -1 / 4), (2.2, 4, 6, -1 / 2), (2.6, 3, 5, -1 / 2)],

@@ -75,8 +75,8 @@ def _orthonormal(values: FloatArray, weights: FloatArray) -> tuple[FloatArray, F
     scale = np.where(norms > 0.0, norms, 1.0)
     _, triangle, pivot = qr(weighted / scale, mode="economic", pivoting=True)
     rank = int(np.count_nonzero(np.abs(np.diag(triangle)) > _REPEATED))
-    inverse = solve_triangular(triangle[:rank, :rank], np.eye(rank))
     back = np.zeros((values.shape[1], rank))
-    back[pivot[:rank]] = inverse
+    if rank:
+        back[pivot[:rank]] = solve_triangular(triangle[:rank, :rank], np.eye(rank))
     back /= scale[:, None]
     return np.ascontiguousarray((values @ back).T), back
