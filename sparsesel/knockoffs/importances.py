@@ -97,8 +97,8 @@ FloatArray = NDArray[np.float64]
 # The grid of penalties: three decades in steps of 7%, solved in parts of a factor of two.
 _GRID, _ALPHA_MIN_RATIO, _PART = 100, 1e-3, 10
 # The smallest loss is believed when it lies this many points above the end, a factor of three in
-# the penalty, or the fewer, a factor of 1.4, once a quarter of its gain on the null model is lost.
-_FAR, _NEAR = 15, 5
+# the penalty, or the fewer, a factor of 1.7, once a quarter of its gain on the null model is lost.
+_FAR, _NEAR = 15, 8
 # Of an outcome that intercept and covariates explain only rounding is left, relative to its size.
 _NOTHING_LEFT = 1e-12
 # Ridge penalties that are tried, relative to the largest squared singular value.
