@@ -49,8 +49,8 @@ def make_problem(loss="squared_error", n=120, m=8, seed=0, **settings):
     covariates = generator.standard_normal((n, 2))
     X = generator.standard_normal((n, m)) + 0.6 * generator.standard_normal((n, 1))
     X += covariates @ generator.standard_normal((2, m)) / 3
-    X[:, 2] = covariates @ [2.0, 1.0]  # determined by the covariates, as is the next
-    X[:, 5] = covariates @ [1.0, -2.0]
+    X[:, 2] = 1.5  # constant
+    X[:, 5] = covariates @ [1.0, -2.0]  # determined by the covariates
     weight = generator.uniform(0.5, 2.0, n)
     model = GaussianModel().fit(X, covariates=covariates, sample_weight=weight)
     beta = np.array([1.0, 0.5, 0.0, -1.0, 0.4, 0.0, -0.6, 0.0])
@@ -149,7 +149,8 @@ class LeftmostOfEqualColumns(BaseEstimator):
     the first has importance one and all others none."""
 
     def fit(self, X, y):
-        correlation = np.abs((X - X.mean(0)).T @ (y - y.mean())) / X.std(0)
+        spread = np.maximum(X.std(0), 1e-9)  # one column is constant
+        correlation = np.abs((X - X.mean(0)).T @ (y - y.mean())) / spread
         first = np.argmax(correlation >= 0.4 * correlation.max())
         self.feature_importances_ = (np.arange(X.shape[1]) == first).astype(float)
         return self
